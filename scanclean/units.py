@@ -64,7 +64,9 @@ class Length:
 
     def __post_init__(self) -> None:
         if self.unit not in _UNITS:
-            raise ValueError(f"a length needs one of the units {', '.join(_UNITS)}, got {self.unit!r}")
+            raise ValueError(
+                f"a length needs one of the units {', '.join(_UNITS)}, got {self.unit!r}"
+            )
         if not (math.isfinite(self.value) and self.value >= 0):
             raise ValueError(f"a length must not be negative, got {self.value}")
 
@@ -73,7 +75,9 @@ class Length:
         """Read ``"0.25 mm"``; raises ValueError with what is allowed."""
         match = _LENGTH.fullmatch(text) if isinstance(text, str) else None
         if match is None or match[2] not in _UNITS:
-            raise ValueError(f'a length such as "0.25 mm", "9 pt" or "3 px" is needed, got {text!r}')
+            raise ValueError(
+                f'a length such as "0.25 mm", "9 pt" or "3 px" is needed, got {text!r}'
+            )
         return cls(float(match[1]), match[2])
 
     def px(self, dpi: float) -> float:
