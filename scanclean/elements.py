@@ -16,8 +16,6 @@ __all__ = ["Element", "box", "diamond", "disk", "from_text", "line"]
 
 Grid = NDArray[np.int64]
 
-Grid = NDArray[np.int64]
-
 
 @dataclass(frozen=True)
 class Element:

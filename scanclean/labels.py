@@ -1,8 +1,8 @@
 """Connected components of a page, and their measures as columns.
 
 Glossary: N runs, C components. A component is a tree-like patchwork of runs: two runs of
-neighbouring rows that touch are joined, and since each such contact is one stretch, the Euler number
-of a component is its runs minus its contacts.
+neighbouring rows that touch are joined, and since each such contact is one stretch, the Euler
+number of a component is its runs minus its contacts.
 """
 
 from __future__ import annotations

@@ -1,8 +1,8 @@
 """Erosion, dilation and what is built of them, on runs.
 
-Outside the page there is no ink: a set is the same set on an endless plane, and results are
-cut to the page at the end. So erosion is eaten from the border where the element reaches over it, and
-the laws of the plane (duality, idempotence, opening inside and closing outside the set) hold.
+Outside the page there is no ink: a page is a set on an endless plane, and results are cut to the
+page at the end. So erosion eats from the border where the element reaches over it, and the laws of
+the plane (adjunction, idempotence, opening inside and closing outside the set) hold.
 
 References
 ----------
@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from scanclean.elements import Element
 from scanclean.labels import label
-from scanclean.runs import RunSet, clipped, covered, complement, crop, pad, translate
+from scanclean.runs import RunSet, clipped, complement, covered, crop, pad, translate
 
 __all__ = [
     "close_set",

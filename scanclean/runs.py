@@ -41,7 +41,7 @@ Ints = NDArray[np.int64]
 class RunSet:
     """A set of points on a page of H x W pixels.
 
-    Make one with `from_mask`, `from_runs`, `empty` or `full`; the constructor itself checks nothing.
+    Make one with `from_mask`, `from_runs`, `empty` or `full`; the constructor checks nothing.
 
     Parameters
     ----------
