@@ -13,14 +13,14 @@ from dataclasses import dataclass
 
 from scanclean import elements
 from scanclean.elements import Element
+from scanclean.ledger import CLAIMS
 from scanclean.morphology import close_set, dilate, erode, hit_or_miss, open_set, reconstruct
 from scanclean.runs import RunSet
 from scanclean.settings import setting
 from scanclean.units import Length, Resolution
 
-__all__ = ["CLAIMS", "OPERATIONS", "PLACES", "Step"]
+__all__ = ["OPERATIONS", "PLACES", "Step"]
 
-CLAIMS = ("speck", "rule", "edge", "shade")
 PLACES = ("threshold", "edges", "rules", "specks", "holes")
 
 _SHAPES = {
