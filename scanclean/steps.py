@@ -72,13 +72,13 @@ class Step:
     claim: str = setting("speck", "class of what the step takes out", choices=CLAIMS)
     name: str = setting("", "what messages call the step")
     element: str = setting("line", "shape of the structuring element", choices=tuple(_SHAPES))
-    length: Length | None = setting(None, "length of a line", auto=True)
+    length: Length | None = setting(None, "length of a line")
     angle: float = setting(
         0.0, "of a line, degrees from across towards down: 90 is upright", low=-180, high=180
     )
-    width: Length | None = setting(None, "width of a box", auto=True)
-    height: Length | None = setting(None, "height of a box", auto=True)
-    radius: Length | None = setting(None, "radius of a disk or diamond", auto=True)
+    width: Length | None = setting(None, "width of a box")
+    height: Length | None = setting(None, "height of a box")
+    radius: Length | None = setting(None, "radius of a disk or diamond")
     picture: str = setting(
         "", "rows of # (point) and . (none); O is a point and the origin, o the origin alone"
     )
@@ -86,7 +86,7 @@ class Step:
         "", "of hit-or-miss, thinning and thickening: picture of what must be paper"
     )
     origin: tuple[int, int] | None = setting(
-        None, "column and row of an origin that no picture marks; it may lie outside", auto=True
+        None, "column and row of an origin that no picture marks; it may lie outside"
     )
 
     def __post_init__(self) -> None:
