@@ -141,7 +141,8 @@ def _is_edge(pieces: Components, side: str, resolution: Resolution) -> NDArray[n
         outer, inner = inner, outer
     fringe = (outer == 0) & (across <= _FRINGE_MM)
     line = (along >= _LINE_MM) & (along >= 10 * across)
-    return (fringe | line) & (inner > 0)
+    edge: NDArray[np.bool_] = (fringe | line) & (inner > 0)
+    return edge
 
 
 def _mostly_in(ink: RunSet, zone: RunSet) -> RunSet:
