@@ -1,0 +1,309 @@
+"""A page measured against its own paper: the ratio of light, its density, and what they tell.
+
+Paper is seldom white and seldom evenly lit. Divided by the level of the paper round it, a pixel
+says how much of the light the ink lets through, whatever the lamp did; its negative decimal
+logarithm is the optical density, which adds up where ink lies over ink.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from PIL import Image
+
+from scanclean.blocks import Surface, block_moments, sliding_max, sliding_min
+from scanclean.units import Resolution
+
+__all__ = ["BLOCK", "DENSITY", "Tone", "measure_tone", "otsu_level", "run_length"]
+
+BLOCK = 8
+"""Side in pixels of the blocks whose moments `Tone` holds."""
+
+DENSITY: NDArray[np.float32] = -np.log10(
+    np.maximum(np.arange(256) / 255.0, 0.012), dtype=np.float64
+).astype(np.float32)
+"""(256,) float32: optical density of each value of `Tone.ratio`; black counts as 1.2 % of paper."""
+
+_COARSE_PER_MM = 3.0  # the paper is looked for at about 75 dpi: between lines it still shows
+_CLOSING_MM = 5.0  # strokes narrower than this are closed over when the paper is looked for
+_PAPER_MM = 3.0  # the paper level is smoothed over this
+_BLACK = 0.25  # what is darker than this share of the page's bright paper is no paper
+_SIGMAS = 5.0  # ink stands out of the paper's noise by more than this
+_FEWEST_PAIRS = 12  # neighbours that stand out: a dot of 4 x 4 pixels
+_STROKE_DEFAULT = 4.0  # of a page without ink
+
+
+@dataclass(frozen=True, eq=False)
+class Tone:
+    """A grey page against its paper.
+
+    Attributes
+    ----------
+    ratio : uint8, shape (H, W)
+        255 page / paper, clipped: 255 is paper, 0 black. A light-on-dark page is inverted first.
+    noise : float
+        Standard deviation of page / paper on blank paper.
+    light_on_dark : bool
+        Whether the page was inverted.
+    stroke_px : float
+        Rough width of the strokes in pixels: median run length of ink, the smaller of across
+        and down, between 2 and 20; 4 on a blank page.
+    paper : Surface
+        Level of the paper in grey levels, after inversion.
+    paper_level : float
+        Median of ``paper``.
+    ink_darkness : float
+        Darkness ``1 - page / paper`` of the ink, the mean over all ink weighted by itself;
+        0 on a blank page.
+    blank : bool
+        Nothing stands out of the noise of the paper: no ink. An all-black page is blank too.
+    mean, square : float32, shape (ceil(H / BLOCK), ceil(W / BLOCK))
+        Mean of the darkness ``1 - page / paper`` and of its square, in blocks.
+    """
+
+    ratio: NDArray[np.uint8]
+    noise: float
+    light_on_dark: bool
+    stroke_px: float
+    paper: Surface
+    paper_level: float
+    ink_darkness: float
+    blank: bool
+    mean: NDArray[np.float32]
+    square: NDArray[np.float32]
+
+
+def measure_tone(
+    grey: NDArray[np.uint8],
+    *,
+    resolution: Resolution | None = None,
+    light_on_dark: bool | None = None,
+) -> Tone:
+    """Measure a grey page against its paper.
+
+    Parameters
+    ----------
+    grey : uint8, shape (H, W)
+        0 black, 255 white.
+    resolution : Resolution, optional
+        300 dpi is assumed where it is not given; only the scale of the paper's unevenness
+        depends on it.
+    light_on_dark : bool, optional
+        Whether light ink stands on dark paper; found out when not given.
+
+    Returns
+    -------
+    Tone
+
+    Raises
+    ------
+    ValueError
+        If ``grey`` is not a two-dimensional uint8 array with at least one pixel.
+    """
+    if grey.ndim != 2 or grey.dtype != np.uint8 or grey.size == 0:
+        raise ValueError(
+            f"a grey page must be a (H, W) uint8 array, got {grey.dtype} of shape {grey.shape}"
+        )
+    resolution = resolution or Resolution(300.0, 300.0)
+    step = min(16, max(1, round(resolution.mm / _COARSE_PER_MM)))
+    coarse = np.asarray(Image.fromarray(grey).reduce(step))
+    if light_on_dark is None:
+        light_on_dark = _is_light_on_dark(coarse)
+    if light_on_dark:
+        grey = ~grey
+        coarse = np.asarray(Image.fromarray(grey).reduce(step))  # rounds as the negative would
+    paper = _paper_surface(coarse, step, grey.shape, per_mm=resolution.mm / step)
+    mean, square, noise = _darkness_moments(grey, paper)
+    ratio = _ratio(grey, paper)
+
+    histogram = np.array(Image.fromarray(ratio).histogram())
+    ink_darkness = _ink_darkness(ratio, histogram, noise)
+    blank = ink_darkness == 0.0
+    stroke = _STROKE_DEFAULT if blank else _stroke_width(ratio, otsu_level(histogram))
+    return Tone(
+        ratio=ratio,
+        noise=noise,
+        light_on_dark=light_on_dark,
+        stroke_px=stroke,
+        paper=paper,
+        paper_level=float(np.median(paper.grid)),
+        ink_darkness=ink_darkness,
+        blank=blank,
+        mean=mean,
+        square=square,
+    )
+
+
+def otsu_level(histogram: NDArray[np.integer]) -> int:
+    """Threshold that splits a histogram into the two classes farthest apart.
+
+    Parameters
+    ----------
+    histogram : int, shape (L,)
+
+    Returns
+    -------
+    int
+        The largest level of the lower class, so ink is ``grey <= level``; of equally good
+        levels the first. 0 where all pixels have one level.
+
+    References
+    ----------
+    N. Otsu, "A threshold selection method from gray-level histograms", IEEE Trans. Systems, Man
+    and Cybernetics 9(1), 62-66, 1979.
+    """
+    count = np.cumsum(histogram, dtype=np.float64)
+    moment = np.cumsum(histogram * np.arange(len(histogram)), dtype=np.float64)
+    total = count[-1]
+    splits = (count > 0) & (count < total)
+    if not splits.any():
+        return 0
+    # between-class variance times the number of pixels squared
+    lower = np.where(splits, count, 1.0)
+    upper = np.where(splits, total - count, 1.0)
+    between = (moment[-1] * lower / total - moment) ** 2 / (lower * upper)
+    return int(np.argmax(np.where(splits, between, -1.0)))
+
+
+def run_length(mask: NDArray[np.bool_]) -> NDArray[np.intp]:
+    """Lengths of all horizontal runs of a mask, row by row."""
+    padded = np.zeros((mask.shape[0], mask.shape[1] + 2), bool)
+    padded[:, 1:-1] = mask
+    flat = padded.ravel()
+    turns = np.flatnonzero(flat[1:] != flat[:-1])
+    return turns[1::2] - turns[0::2]
+
+
+# ---- parts of the measure
+
+
+def _quantile(values: NDArray[np.uint8], share: float) -> int:
+    """Smallest level that at least a share of the pixels do not exceed."""
+    count = np.cumsum(Image.fromarray(values).histogram())
+    return int(np.searchsorted(count, share * count[-1]))
+
+
+def _is_light_on_dark(coarse: NDArray[np.uint8]) -> bool:
+    """Whether what is rare in the textured parts of a dark page is light.
+
+    Where there is text, the ink covers less than the paper, so the mean of a small window lies
+    on the paper's side of the middle between its extremes. A scanner bed or a black border
+    round a normal page has no say in that: at its edge both sides are even. The page must be dark
+    as a whole as well.
+    """
+    side = 15
+    height, width = (n // side * side for n in coarse.shape)
+    if not (height and width):
+        return bool(np.median(coarse) < 128 and coarse.max() > 128)
+    cells = coarse[:height, :width].reshape(height // side, side, width // side, side)
+    low = cells.min(axis=(1, 3)).astype(np.float64)
+    high = cells.max(axis=(1, 3)).astype(np.float64)
+    skewness = cells.mean(axis=(1, 3)) - (low + high) / 2
+    is_dark = _quantile(coarse, 0.5) < (_quantile(coarse, 0.01) + _quantile(coarse, 0.99)) / 2
+    return bool(is_dark and skewness.sum() < -0.1 * (high - low).sum())
+
+
+def _paper_surface(
+    coarse: NDArray[np.uint8], step: int, shape: tuple[int, int], *, per_mm: float
+) -> Surface:
+    """Level of the paper, smooth over some millimetres.
+
+    1. Closing of the reduced page over strokes and small solids: the level of the brightest
+       paper near by.
+    2. Cells near that level are paper; cells nearly black are no paper at all: solids, scanner
+       bed.
+    3. Mean of the paper cells in blocks, smoothed; where there are none near by, the nearest.
+    """
+    side = 2 * max(1, round(_CLOSING_MM * per_mm / 2)) + 1
+    closed = sliding_min(sliding_max(coarse, side), side)
+    is_paper = coarse >= np.maximum(0.93 * closed, _BLACK * _quantile(closed, 0.8))
+    is_paper &= coarse <= 1.15 * closed
+    group = max(1, round(_PAPER_MM * per_mm / 2))
+    weight = is_paper.astype(np.float32)
+    share = np.asarray(Image.fromarray(weight).reduce(group))
+    level = np.asarray(Image.fromarray(weight * coarse).reduce(group))
+    level = level / np.maximum(share, 1e-6)
+    smooth = _fill(level, share)
+    # what smoothing flattened is added back: twicing (Tukey 1977, Exploratory Data Analysis)
+    smooth += _fill(level - smooth, share)
+    return Surface(np.clip(smooth, 1.0, 255.0), step * group, shape)
+
+
+def _fill(level: NDArray[np.float32], weight: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Weighted mean round each cell; where there is no weight, of wider rounds or of all."""
+    from scipy.ndimage import gaussian_filter
+
+    total = np.full(level.shape, 1e-5, np.float32)
+    value = total * float((level * weight).sum() / max(weight.sum(), 1e-6))
+    for sigma, importance in ((1.5, 1.0), (8.0, 1e-2)):
+        total += importance * gaussian_filter(weight, sigma, mode="constant", truncate=2.5)
+        value += importance * gaussian_filter(level * weight, sigma, mode="constant", truncate=2.5)
+    filled: NDArray[np.float32] = value / total
+    return filled
+
+
+def _darkness_moments(
+    grey: NDArray[np.uint8], paper: Surface
+) -> tuple[NDArray[np.float32], NDArray[np.float32], float]:
+    """Mean and mean square of ``1 - page / paper`` in blocks, and the noise of blank paper."""
+    centre = float(np.median(paper.grid))
+    mean, square = block_moments(grey, BLOCK, centre=centre)
+    height, width = mean.shape
+    # the paper is smoother than the blocks are small: its level at their centres will do
+    level = np.asarray(
+        Image.fromarray(paper.grid).resize(
+            (width, height),
+            Image.Resampling.BILINEAR,
+            box=(0, 0, paper.shape[1] / paper.size, paper.shape[0] / paper.size),
+        )
+    )
+    variance = np.maximum(square - mean * mean, 0.0) / (level * level)
+    darkness = 1.0 - (mean + centre) / level
+    blank = np.abs(darkness) < 0.03
+    if np.count_nonzero(blank) > 0.01 * blank.size:
+        spread = float(np.quantile(variance[blank], 0.3))
+    else:
+        spread = float(np.quantile(variance, 0.05))
+    quantisation = 1.0 / (12.0 * centre * centre)
+    return darkness, variance + darkness * darkness, math.sqrt(spread + quantisation)
+
+
+def _ratio(grey: NDArray[np.uint8], paper: Surface) -> NDArray[np.uint8]:
+    """255 page / paper, clipped to uint8."""
+    ratio = np.empty_like(grey)
+    scale = Surface(np.float32(255.0) / paper.grid, paper.size, paper.shape)
+    for rows, values in scale.strips():
+        np.multiply(grey[rows], values, out=values)
+        np.minimum(values, 255.0, out=values)
+        ratio[rows] = values
+    return ratio
+
+
+def _ink_darkness(ratio: NDArray[np.uint8], histogram: NDArray[np.integer], noise: float) -> float:
+    """Mean darkness of what stands out of the noise, weighted by itself; 0 if nothing does.
+
+    Of nine million pixels of pure noise some stand out by five standard deviations, but hardly
+    ever two side by side.
+    """
+    darkness = 1.0 - np.arange(256) / 255.0
+    stands_out = darkness > _SIGMAS * noise
+    out = ratio < np.count_nonzero(stands_out)  # darkness falls with the level
+    if np.count_nonzero(out[:, 1:] & out[:, :-1]) < _FEWEST_PAIRS:
+        return 0.0
+    weight = histogram * stands_out
+    return float((weight * darkness**2).sum() / (weight * darkness).sum())
+
+
+def _stroke_width(ratio: NDArray[np.uint8], level: int) -> float:
+    """Median run length of ink, the smaller of across and down."""
+    # rows and columns spread over the page tell as much as all of them
+    thin = max(1, min(ratio.shape) // 300)
+    medians = []
+    for sample in (ratio[::thin], np.ascontiguousarray(ratio[:, ::thin].T)):
+        lengths = run_length(sample <= level)
+        lengths = lengths[lengths > 1]
+        medians.append(float(np.median(lengths)) if lengths.size else _STROKE_DEFAULT)
+    return float(np.clip(min(medians), 2.0, 20.0))
