@@ -53,7 +53,6 @@ _HOME = {
     "read_pages": "pageio",
     "Tone": "density",
     "measure_tone": "density",
-    "threshold": "threshold",
     "Ledger": "ledger",
     "Layout": "layout",
     "read_layout": "layout",
