@@ -6,11 +6,15 @@ Wrong arguments of library calls stay ``ValueError`` and ``TypeError``.
 
 from __future__ import annotations
 
-__all__ = ["OutputError", "PageError", "RecipeError", "ScancleanError"]
+__all__ = ["CallError", "OutputError", "PageError", "RecipeError", "ScancleanError"]
 
 
 class ScancleanError(Exception):
     """Base of all errors that a user can meet and mend."""
+
+
+class CallError(ScancleanError):
+    """A call that cannot be carried out as it stands; nothing was done."""
 
 
 class PageError(ScancleanError):
