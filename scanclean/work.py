@@ -25,7 +25,19 @@ from scanclean.recipe import Recipe
 from scanclean.sources import SourceFile
 from scanclean.units import Resolution
 
-__all__ = ["BindWork", "CleanWork", "Done", "PageTask", "RestoreWork", "Work", "page_layout"]
+__all__ = [
+    "LEDGER_SUFFIXES",
+    "BindWork",
+    "CleanWork",
+    "Done",
+    "PageTask",
+    "RestoreWork",
+    "Work",
+    "page_layout",
+]
+
+LEDGER_SUFFIXES = (".ledger.png",)
+"""What ledgers in folders end with."""
 
 _BINDERS = {"tiff": (".tif", bind_tiff), "pdf": (".pdf", bind_pdf)}
 
