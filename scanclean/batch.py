@@ -22,7 +22,7 @@ from pathlib import Path
 from typing import IO
 
 from scanclean import __version__
-from scanclean.errors import CallError, PageError, ScancleanError
+from scanclean.errors import CallError, OutputError, PageError, ScancleanError
 from scanclean.files import Written, file_sha256, one_line, shown, writing
 from scanclean.pageio import count_pages
 from scanclean.pool import Job, run_jobs
@@ -178,7 +178,7 @@ def plan_batch(
     if recorded:
         found = find_scans(scans, suffixes=suffixes, output=target, results_in=recorded_results)
     else:
-        found = find_scans(scans, suffixes=suffixes)
+        found = find_scans(scans, suffixes=suffixes, count_others=False)
     tasks: list[PageTask] = []
     unreadable: list[tuple[PageTask, str]] = []
     notes, problems = list(found.notes), list(found.problems)
@@ -320,7 +320,9 @@ class _Run:
         else:  # such as crops, when this run was not asked for them
             for output in old:
                 _remove(self._batch.output / output.file)
-        self._log.put(record)
+        # on a full disk the pages fail one by one; `close` writes all lines anew, or says why not
+        with contextlib.suppress(OutputError):
+            self._log.put(record)
         return record
 
     def _bind_job(self, source: SourceFile, kind: str, pages: list[PageRecord]) -> Job[Outcome]:
@@ -372,19 +374,17 @@ class _PageJob:
             with writing(place.parent):
                 place.parent.mkdir(parents=True, exist_ok=True)
             with writing(self.part):
-                _remove(self.part)
-                self.part.mkdir()
+                _empty(self.part)  # the mark of a run that was cut off stays till this is recorded
+                self.part.mkdir(exist_ok=True)
             done = work.do(task, self.part)
             self._move(done.written, place)
         except Exception as error:
-            if not (self.part / _MOVING).exists():
-                _remove(self.part)
+            _empty(self.part)
             # messages name the place where a file was to be in the end
             message = _message(error, task).replace(shown(self.part), shown(place.parent))
             return _failed(task, work, message, time.perf_counter() - began)
         except BaseException:
-            if not (self.part / _MOVING).exists():
-                _remove(self.part)
+            _empty(self.part)
             raise
         record = PageRecord(
             name=task.name,
@@ -412,11 +412,16 @@ class _PageJob:
 
     def _move(self, written: Mapping[str, Written], place: Path) -> None:
         """Give the results their names; one that is a folder replaces the whole folder."""
+        suffixes = [suffix.rstrip("/") for suffix in written]
+        moves = [(self.part / (place.name + each), Path(f"{place}{each}")) for each in suffixes]
+        for source, target in moves:  # all or none: what is in the way is found before the first
+            if os.path.lexists(target) and source.is_dir() != target.is_dir():
+                kind = "file" if source.is_dir() else "folder"
+                raise OutputError(f"{shown(target)}: a {kind} of this name is in the way; move it")
         with writing(place):
             (self.part / _MOVING).touch()
-            for suffix in (name.rstrip("/") for name in written):
-                source, target = self.part / (place.name + suffix), Path(f"{place}{suffix}")
-                if source.is_dir() and target.is_dir() and not target.is_symlink():
+            for source, target in moves:
+                if source.is_dir() and target.is_dir():
                     os.rename(target, self.part / "replaced")
                 os.replace(source, target)
 
@@ -477,10 +482,9 @@ def _part_folder(output: Path) -> Iterator[Path]:
         try:
             yield part
         finally:
-            for folder in part.iterdir():
-                if not (folder / _MOVING).exists():
-                    _remove(folder)
             with contextlib.suppress(OSError):
+                for folder in part.iterdir():
+                    _empty(folder)
                 part.rmdir()
     finally:
         lock.close()
@@ -504,6 +508,17 @@ def _locked(file: IO[bytes]) -> bool:
 def _folder_of(part: Path, name: str) -> Path:
     """Where a page's results are made: a flat name of fixed length, whatever the page's is."""
     return part / hashlib.sha256(os.fsencode(name)).hexdigest()[:24]
+
+
+def _empty(folder: Path) -> None:
+    """Remove a part folder, or all but its mark if some of its results are in their places."""
+    moving = folder / _MOVING
+    if not moving.exists():
+        _remove(folder)
+        return
+    for path in list(folder.iterdir()):
+        if path != moving:
+            _remove(path)
 
 
 def _remove(path: Path) -> None:

@@ -26,6 +26,7 @@ from scanclean.edges import EdgeSettings
 from scanclean.errors import RecipeError
 from scanclean.holes import HoleSettings
 from scanclean.steps import Step
+from scanclean.threshold import ThresholdSettings
 from scanclean.units import Length
 
 __all__ = ["Recipe", "parse_recipe", "read_recipe", "to_toml"]
@@ -46,6 +47,7 @@ class Recipe:
     '0.1 mm'
     """
 
+    threshold: ThresholdSettings = field(default_factory=ThresholdSettings)
     edges: EdgeSettings = field(default_factory=EdgeSettings)
     holes: HoleSettings = field(default_factory=HoleSettings)
     steps: tuple[Step, ...] = ()

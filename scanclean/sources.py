@@ -120,6 +120,7 @@ def find_scans(
     suffixes: Sequence[str],
     output: Path | None = None,
     results_in: ResultsIn = lambda folder: None,
+    count_others: bool = True,
 ) -> Found:
     """The scans among files and folders.
 
@@ -134,6 +135,8 @@ def find_scans(
     results_in : callable
         Folders below the given ones for which it tells results are not walked; in a given one
         those results are passed over.
+    count_others : bool
+        Whether a note says how many files end with something else.
 
     Returns
     -------
@@ -144,7 +147,12 @@ def find_scans(
     CallError
         If a folder is to be walked and written to.
     """
-    search = _Search("" if output is None else _identity(output), tuple(suffixes), results_in)
+    search = _Search(
+        output="" if output is None else _identity(output),
+        suffixes=tuple(suffixes),
+        results_in=results_in,
+        count_others=count_others,
+    )
     for argument in arguments:
         search.add(Path(argument))
     files: dict[tuple[str, str], SourceFile] = {}
@@ -227,6 +235,7 @@ class _Search:
     output: str
     suffixes: tuple[str, ...]
     results_in: ResultsIn
+    count_others: bool
     files: list[SourceFile] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
     problems: list[str] = field(default_factory=list)
@@ -262,8 +271,8 @@ class _Search:
             self.files.append(SourceFile(path, str(name)))
         self.notes += skipped.notes(folder)
         if (len(self.files), len(self.problems)) == before:
-            known = ", ".join(self.suffixes)
-            self.problems.append(f"{shown(folder)}: no scan in this folder (looked for {known})")
+            known = " or ".join(self.suffixes)
+            self.problems.append(f"{shown(folder)}: nothing in this folder ends with {known}")
 
     def _walk(self, folder: Path, home: str, skipped: _Skipped) -> Iterator[Path]:
         """Scans below a folder, depth first, in the order of their names."""
@@ -293,7 +302,7 @@ class _Search:
                 yield from self._walk(path, home, skipped)
             elif is_file and self._suffix(entry.name):
                 yield path
-            else:
+            elif self.count_others:
                 skipped.others.append(path)
 
     def _followed(self, path: Path, home: str, skipped: _Skipped) -> bool:
