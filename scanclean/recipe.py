@@ -354,11 +354,11 @@ def _line_of(text: str, place: tuple[str | int, ...]) -> int:
     TOML and has the value, and it began after the last such line before. That holds for dotted
     keys, inline tables and texts of several lines alike. Only ever done for a recipe in error.
     """
-    lines = text.splitlines(keepends=True)
+    lines = text.split("\n")
     begin = 0
     for end in range(1, len(lines) + 1):
         try:
-            data: Any = tomllib.loads("".join(lines[:end]))
+            data: Any = tomllib.loads("\n".join(lines[:end]))
         except tomllib.TOMLDecodeError:
             continue
         if _has(data, place):
@@ -379,7 +379,7 @@ def _has(data: Any, place: tuple[str | int, ...]) -> bool:
 def _syntax_error(text: str, name: str, message: str) -> str:
     found = re.fullmatch(r"(.*?) \(at (?:line (\d+), column (\d+)|end of document)\)", message)
     what = found[1] if found else message
-    line = found[2] if found and found[2] else len(text.splitlines()) or 1
+    line = found[2] if found and found[2] else text.rstrip("\n").count("\n") + 1
     return f"{name}, line {line}: no valid TOML: {what[:1].lower()}{what[1:]}"
 
 
@@ -437,7 +437,8 @@ def _toml(value: object) -> str:
     if isinstance(value, Length):
         return f'"{_length_text(value)}"'
     if isinstance(value, str):
-        return json.dumps(value, ensure_ascii=True)  # a JSON text is a TOML basic string
+        # a JSON text is a TOML basic string, but for one control character that JSON leaves be
+        return json.dumps(value, ensure_ascii=False).replace("\x7f", "\\u007f")
     if isinstance(value, tuple):
         return "[" + ", ".join(map(_toml, value)) + "]"
     if isinstance(value, bool):

@@ -1,0 +1,90 @@
+"""A module imports only from those before it, and `--help` pays for click alone."""
+
+from __future__ import annotations
+
+import ast
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+import scanclean
+
+PACKAGE = Path(scanclean.__file__).parent
+FACADE = {"__init__", "__main__"}
+
+ORDER = """
+errors units settings blocks smoothing
+runs elements labels morphology
+files pagewrite pageio
+density contrast relaxation outlines threshold
+upright skew edges
+profiles tracks ruling
+textmeasure neighbours baselines columns textlines specks glyphs shade holes
+ledger layout steps recipe clean
+sources runlog work pool batch
+score cli
+""".split()  # noqa: SIM905 (a row a layer)
+
+
+def imported(path: Path) -> dict[str, int]:
+    """Modules of the package that a module imports anywhere, with a line where it does."""
+    found: dict[str, int] = {}
+    for node in ast.walk(ast.parse(path.read_text("utf-8"))):
+        if isinstance(node, ast.ImportFrom) and node.level == 0:
+            module = node.module or ""
+            if module == "scanclean":
+                found.update((a.name, node.lineno) for a in node.names if a.name != "__version__")
+            elif module.startswith("scanclean."):
+                found[module.split(".")[1]] = node.lineno
+        elif isinstance(node, ast.ImportFrom):
+            found[f"relative import {node.module}"] = node.lineno
+        elif isinstance(node, ast.Import):
+            parts = (a.name.split(".") for a in node.names)
+            found.update((p[1], node.lineno) for p in parts if p[0] == "scanclean" and len(p) > 1)
+    return found
+
+
+def modules() -> list[str]:
+    return sorted(path.stem for path in PACKAGE.glob("*.py") if path.stem not in FACADE)
+
+
+def test_the_order_lists_every_module_once():
+    assert sorted(ORDER) == modules()
+
+
+@pytest.mark.parametrize("name", modules())
+def test_a_module_imports_only_from_those_before_it(name):
+    before = ORDER[: ORDER.index(name)]
+    above = {
+        module: line
+        for module, line in imported(PACKAGE / f"{name}.py").items()
+        if module not in before
+    }
+    assert not above, f"{name} imports {above} (module: line), which do not stand before it"
+
+
+def test_the_check_sees_imports_of_every_kind(tmp_path):
+    source = tmp_path / "module.py"
+    source.write_text(
+        "import scanclean.runs\n"
+        "from scanclean import labels, __version__\n"
+        "def f():\n    from scanclean.batch import Batch\n"
+        "from . import cli\n"
+    )
+    assert set(imported(source)) == {"runs", "labels", "batch", "relative import None"}
+
+
+@pytest.mark.parametrize("arguments", [["--help"], ["clean", "--help"], ["--version"]])
+def test_help_imports_no_heavy_library(arguments):
+    script = (
+        "import sys\n"
+        "from scanclean.cli import main\n"
+        f"sys.argv = ['scanclean', *{arguments}]\n"
+        "try:\n    main()\n"
+        "except SystemExit as end:\n    status = end.code\n"
+        "print('HEAVY', sorted({'numpy', 'scipy', 'skimage', 'PIL'} & set(sys.modules)), status)\n"
+    )
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True)
+    assert done.stdout.splitlines()[-1] == "HEAVY [] 0", done.stdout + done.stderr
