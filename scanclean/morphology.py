@@ -123,13 +123,25 @@ def fill_holes(a: RunSet, *, max_area: int | None = None, connectivity: int = 8)
     connectivity : {8, 4}
         That of the ink; the paper's is the other one, so that a closed ring encloses its hole.
     """
-    paper = label(complement(a), connectivity=12 - connectivity)
-    left, top, right, bottom = paper.box.T
+    paper, around = complement(a), 12 - connectivity
+    if max_area is not None:
+        # a hole of so few pixels is made of gaps as short, most of the paper is not: what touches
+        # a longer gap is no such hole, and the rest is labelled in a tenth of the time
+        short = paper.length <= max_area
+        pairs = paper.bounds.reshape(-1, 2)
+        long = RunSet(a.shape, pairs[~short].ravel())
+        paper = RunSet(a.shape, pairs[short].ravel())
+        open_run = _beside(paper, long, connectivity=around)
+    else:
+        open_run = np.zeros(paper.n_runs, bool)
+    gaps = label(paper, connectivity=around)
+    left, top, right, bottom = gaps.box.T
     height, width = a.shape
     hole = (left > 0) & (top > 0) & (right < width) & (bottom < height)
+    hole[gaps.run_label[open_run]] = False
     if max_area is not None:
-        hole &= paper.area <= max_area
-    return a | paper.keep(hole)
+        hole &= gaps.area <= max_area
+    return a | gaps.keep(hole)
 
 
 def open_horizontal(a: RunSet, length: int) -> RunSet:
@@ -176,6 +188,21 @@ def _grow_tall(a: RunSet, rows: int, top: int) -> RunSet:
         room = room | translate(room, 0, step)
         known += step
     return room
+
+
+def _beside(a: RunSet, b: RunSet, *, connectivity: int) -> NDArray[np.bool_]:
+    """(N,) bool: which runs of `a` touch a run of `b` in the row above or below."""
+    corners = connectivity == 8
+    met = np.zeros(a.n_runs, bool)
+    for row in (-a.shape[1] - 1, a.shape[1] + 1):
+        lo = np.searchsorted(
+            b.bounds[1::2], a.bounds[0::2] + row, side="left" if corners else "right"
+        )
+        hi = np.searchsorted(
+            b.bounds[0::2], a.bounds[1::2] + row, side="right" if corners else "left"
+        )
+        met |= lo < hi
+    return met
 
 
 def _on_plane(a: RunSet, element: Element, operation: Callable[[RunSet], RunSet]) -> RunSet:

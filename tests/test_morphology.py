@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from hypothesis import given
+from hypothesis import strategies as st
 from scipy import ndimage
 
 from scanclean.elements import Element, box, diamond, line
@@ -86,6 +87,16 @@ def test_hole_filling(mask):
     # scipy takes the paper with the structure's connectivity: 4 for ink that is joined by corners
     assert fill_holes(of(mask)) == of(ndimage.binary_fill_holes(mask))
     assert fill_holes(of(mask), connectivity=4) == of(ndimage.binary_fill_holes(mask, FULL))
+
+
+@given(masks(), st.integers(0, 9))
+def test_filling_of_small_holes(mask, max_area):
+    for connectivity, structure in ((8, None), (4, FULL)):
+        labels, n = ndimage.label(ndimage.binary_fill_holes(mask, structure) & ~mask, structure)
+        area = np.bincount(labels.ravel(), minlength=n + 1)
+        area[0] = max_area + 1
+        expected = mask | (area <= max_area)[labels]
+        assert fill_holes(of(mask), max_area=max_area, connectivity=connectivity) == of(expected)
 
 
 @given(masks())
