@@ -81,12 +81,12 @@ def box(width: int, height: int) -> Element:
     return Element(RunSet.full((height, width)), (width // 2, height // 2))
 
 
-def line(length: int, angle: float = 0.0) -> Element:
+def line(length: float, angle: float = 0.0) -> Element:
     """A straight line of pixels through the origin at its middle.
 
     Parameters
     ----------
-    length : int
+    length : float
         Pixels along a horizontal or vertical line; a slanting one covers that length too, so it
         holds ``length * max(|cos|, |sin|)`` pixels, rounded.
     angle : float

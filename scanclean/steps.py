@@ -128,7 +128,7 @@ class Step:
             turn = math.radians(self.angle)
             x = math.cos(turn) * self.length.px(resolution.x)
             y = math.sin(turn) * self.length.px(resolution.y)
-            return elements.line(_pixels(math.hypot(x, y)), math.degrees(math.atan2(y, x)))
+            return elements.line(max(1.0, math.hypot(x, y)), math.degrees(math.atan2(y, x)))
         if self.width and self.height:
             return elements.box(
                 _pixels(self.width.px(resolution.x)), _pixels(self.height.px(resolution.y))

@@ -249,7 +249,7 @@ def test_a_misspelt_key_is_refused_with_the_nearest_one(section, key):
             "picture: a picture needs one origin",
         ),
         (
-            "[[step]]\noperation = 'erosion'\nelement = 'picture'\norigin = [1, 2, 3]\npicture = '#'",
+            "[[step]]\noperation = 'erosion'\nelement = 'picture'\norigin = [1, 2, 3]",
             4,
             "two whole numbers such as [3, -1], got [1, 2, 3]",
         ),
