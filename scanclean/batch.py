@@ -376,7 +376,8 @@ class _PageJob:
             with writing(self.part):
                 _empty(self.part)  # the mark of a run that was cut off stays till this is recorded
                 self.part.mkdir(exist_ok=True)
-            done = work.do(task, self.part)
+            with writing(place):
+                done = work.do(task, self.part)
             self._move(done.written, place)
         except Exception as error:
             _empty(self.part)
