@@ -1,0 +1,200 @@
+"""White corridors between columns: which gaps of a row part columns, and which only cells or words.
+
+A wide gap in a row can be a word space, a tab, the space between two cells of a table, or the
+gutter between two columns of text. Only the last two run on through the rows above and below. A
+table's rows run through its corridors level; columns of running text have no common rows, or are
+long lines on both sides.
+
+Glossary: N letters; S pieces of lines; K gaps, each between the right end of one piece and the left
+end of another. Everything is in the upright frame (`upright`).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanclean.baselines import Baselines
+from scanclean.neighbours import best_of_both, chains, repeat_range
+
+__all__ = ["Gaps", "Occupied", "corridors", "parting_columns", "stacks"]
+
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+_LONG_LINE = 14.0  # of the letters' height: cells of a table are shorter as a rule
+_REACH = 12.0  # how far above and below a gap its corridor is followed, in letters' heights
+_LOOK = 24  # pieces further down the page that are tried as the next below
+
+
+@dataclass(frozen=True, eq=False)
+class Gaps:
+    """White gaps in rows; columns of length K.
+
+    Parameters
+    ----------
+    before, after : (K,) int array
+        The piece that ends at the gap and the one that begins there.
+    left, right : (K,) float array
+        Ends of the gap; right may lie left of left where the pieces overlap.
+    y : (K,) float array
+        Baseline there.
+    offset : (K,) float array
+        How far apart the two pieces' baselines are.
+    height : (K,) float array
+        Height of the larger letters.
+    """
+
+    before: Ints
+    after: Ints
+    left: Floats
+    right: Floats
+    y: Floats
+    offset: Floats
+    height: Floats
+
+    @property
+    def width(self) -> Floats:
+        """(K,) negative where the pieces overlap."""
+        return self.right - self.left
+
+    def keep(self, chosen: Bools) -> Gaps:
+        """The chosen gaps."""
+        columns = (self.before, self.after, self.left, self.right, self.y, self.offset, self.height)
+        return Gaps(*(column[chosen] for column in columns))
+
+
+class Occupied:
+    """Where on the page letters stand, on a coarse grid.
+
+    Parameters
+    ----------
+    left, right, top, bottom : (N,) float arrays
+        Boxes of the letters, N > 0.
+    cell : float
+        Side of a grid cell.
+    """
+
+    def __init__(self, left: Floats, right: Floats, top: Floats, bottom: Floats, cell: float):
+        self.cell = cell
+        self.left, self.top = float(left.min()), float(top.min())
+        first, start = self._cell_x(left), self._cell_y(top)
+        last = np.maximum(np.ceil((right - self.left) / cell).astype(np.int64), first + 1)
+        stop = np.maximum(np.ceil((bottom - self.top) / cell).astype(np.int64), start + 1)
+        rows, columns = int(stop.max()), int(last.max())
+        owner, row = repeat_range(start, stop)
+        stride = columns + 1
+        size = rows * stride
+        depth = np.bincount(row * stride + first[owner], minlength=size)
+        depth -= np.bincount(row * stride + last[owner], minlength=size)
+        taken = np.cumsum(depth.reshape(rows, stride), axis=1) > 0
+        self._before = np.zeros((rows, stride + 1), np.int64)  # taken cells left of a column
+        np.cumsum(taken, axis=1, out=self._before[:, 1:])
+
+    def free_stretch(
+        self, left: Floats, right: Floats, top: Floats, bottom: Floats
+    ) -> tuple[Floats, Floats]:
+        """How far up and down from ``top..bottom`` the strips ``left..right`` stay free."""
+        rows, stride = self._before.shape
+        first = np.clip(np.ceil((left - self.left) / self.cell).astype(np.int64), 0, stride - 2)
+        last = np.clip(self._cell_x(right), first + 1, stride - 1)
+        taken = self._before[:, last] > self._before[:, first]
+        row = np.arange(rows)[:, None]
+        start = np.clip(self._cell_y(top), 0, rows - 1)
+        stop = np.clip(self._cell_y(bottom), 0, rows - 1)
+        above = np.where(taken & (row < start), row, -1).max(axis=0, initial=-1)
+        below = np.where(taken & (row > stop), row, rows).min(axis=0, initial=rows)
+        return self.top + (above + 1) * self.cell, self.top + below * self.cell
+
+    def _cell_x(self, x: Floats) -> Ints:
+        return np.floor((x - self.left) / self.cell).astype(np.int64)
+
+    def _cell_y(self, y: Floats) -> Ints:
+        return np.floor((y - self.top) / self.cell).astype(np.int64)
+
+
+def corridors(gaps: Gaps, occupied: Occupied) -> Bools:
+    """(K, K) which gaps lie in one free corridor; each with itself."""
+    height = gaps.height
+    slack = np.maximum(gaps.width - 1.4 * height, 0) / 2
+    joined = np.eye(gaps.left.size, dtype=bool)
+    shared = np.minimum(gaps.right[:, None], gaps.right) - np.maximum(gaps.left[:, None], gaps.left)
+    fits = shared >= 0.6 * height[:, None]
+    fits &= (gaps.width > 0.8 * height)[:, None]
+    fits &= np.abs(gaps.y - gaps.y[:, None]) < _REACH * height[:, None]
+    # what is free above and below may be the left end, the middle or the right end of a wide gap
+    for place in (-1, 0, 1):
+        middle = (gaps.left + gaps.right) / 2 + place * slack
+        up, down = occupied.free_stretch(
+            middle - 0.3 * height,
+            middle + 0.3 * height,
+            gaps.y - 0.9 * height,
+            gaps.y - 0.1 * height,
+        )
+        joined |= fits & (gaps.y > up[:, None]) & (gaps.y - height < down[:, None])
+    return joined
+
+
+def stacks(lines: Baselines, left: Floats, right: Floats) -> Ints:
+    """(S,) the stack that each piece stands in: pieces under one another, each the next below.
+
+    A heading over two columns is stacked on one of them at most.
+    """
+    n = lines.n
+    middle = (left + right) / 2
+    order = np.argsort(lines.at(np.arange(n), middle), kind="stable")
+    steps = range(1, min(n, _LOOK + 1))
+    i = np.concatenate([order[: n - k] for k in steps] or [np.empty(0, np.int64)])
+    j = np.concatenate([order[k:] for k in steps] or [np.empty(0, np.int64)])
+    shared = np.minimum(right[i], right[j]) - np.maximum(left[i], left[j])
+    x = (np.minimum(right[i], right[j]) + np.maximum(left[i], left[j])) / 2
+    step = lines.at(j, x) - lines.at(i, x)
+    high = np.maximum(lines.height[i], lines.height[j])
+    alike = high < 1.7 * np.minimum(lines.height[i], lines.height[j])
+    narrow = np.minimum(right[i] - left[i], right[j] - left[j])
+    wide = np.maximum(right[i] - left[i], right[j] - left[j])
+    fits = alike & (shared > 0.5 * narrow) & (step > 0.8 * high) & (step < 6 * high)
+    i, j = i[fits], j[fits]
+    cost = (step / high - 3 * shared / np.maximum(wide, 1))[fits]
+    chosen = best_of_both(i, j, cost)
+    return chains(i[chosen], j[chosen], n)[1]
+
+
+def parting_columns(
+    gaps: Gaps, corridor: Bools, stack: Ints, lines: Baselines, left: Floats, right: Floats
+) -> Bools:
+    """(K,) which gaps part two columns of text, so that no line runs across them.
+
+    Two stacks are columns if there is a clear gutter between them and either both have long lines
+    or their rows are not level. Gaps that no stacks decide follow the others of their corridor.
+    """
+    parted = np.zeros(gaps.before.size, bool)
+    decided = np.zeros(gaps.before.size, bool)
+    level = lines.at(np.arange(lines.n), (left + right) / 2)
+    before, after = stack[gaps.before], stack[gaps.after]
+    for a, b in np.unique(np.stack((before, after), axis=1), axis=0):
+        if a == b:
+            continue
+        ours, theirs = np.flatnonzero(stack == a), np.flatnonzero(stack == b)
+        height = float(np.median(lines.height[np.concatenate((ours, theirs))]))
+        low = max(level[ours].min(), level[theirs].min()) - height
+        high = min(level[ours].max(), level[theirs].max()) + height
+        ours = ours[(level[ours] > low) & (level[ours] < high)]
+        theirs = theirs[(level[theirs] > low) & (level[theirs] < high)]
+        rows = min(ours.size, theirs.size)
+        if rows < 3:
+            continue
+        between = (before == a) & (after == b)
+        gutter = np.quantile(left[theirs], 0.1) - np.quantile(right[ours], 0.9)
+        offset = float(np.median(gaps.offset[between] / gaps.height[between]))
+        is_level = between.sum() >= 0.7 * rows and offset <= 0.2
+        length = min(np.median((right - left)[ours]), np.median((right - left)[theirs]))
+        decided |= between
+        if gutter > 0.5 * height and (length >= _LONG_LINE * height or not is_level):
+            parted |= between
+    votes = corridor @ (parted.astype(np.int64) - (decided & ~parted))
+    return parted | (~decided & (votes > 0))

@@ -1,0 +1,240 @@
+"""Glyphs: which components make one character together.
+
+In a line of text characters stand side by side, so what stands over one another in it is one
+character: dots, accents, colons, question marks, equals signs and letters broken across. Three
+kinds stand side by side all the same: quotation marks, guillemets, and the parts of percent signs
+and fractions. A mark goes to one letter only, the one it stands over best. Slanted type is sheared
+upright first, from the slant of its tall letters.
+
+Glossary: C components, G glyphs, L lines, K pairs of components. Levels and widths are in
+x-heights of the line (`places`).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanclean.labels import Components
+from scanclean.neighbours import chains, grouped_median, keyed_best, keyed_neighbours
+from scanclean.places import Places, find_places
+from scanclean.textlines import LineSet
+from scanclean.textmeasure import Spread, measure_spread
+from scanclean.upright import Shapes, place
+
+__all__ = ["Parts", "join_parts"]
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+_STEEPEST = 0.7  # slant of any writing, x over y
+_UPRIGHT = 0.08  # less is none
+_LETTERS_FOR_SLANT = 5
+_LOOK = 5  # components further along the line that may still overlap
+
+
+@dataclass(frozen=True, eq=False)
+class Parts:
+    """Components as the parts of glyphs, before anything is in order.
+
+    Parameters
+    ----------
+    places : Places
+        Of the components, sheared upright.
+    glyph : (C,) int array
+        The glyph of each component, in no order.
+    n : int
+        G.
+    """
+
+    places: Places
+    glyph: Ints
+    n: int
+
+
+def join_parts(
+    components: Components, lines: LineSet, *, spread: Spread | None = None
+) -> Parts:
+    """Join components to glyphs.
+
+    Parameters
+    ----------
+    components : Components
+        Of the cleaned page; each gets a glyph.
+    lines : LineSet
+    spread : Spread, optional
+        If it is known already.
+    """
+    spread = spread or measure_spread(components)
+    shapes = place(components, spread, lines.frame)
+    places = upright_type(find_places(lines, shapes), shapes, spread)
+    holes = components.holes
+    marks, hosts = _marks_and_letters(places)
+    hosted = np.zeros(components.n, bool)
+    hosted[marks] = True
+    i, j = _pairs(places)
+    upper, lower = _stacked(places, i, j, components.area, hosted)
+    single = ~hosted
+    single[upper] = single[lower] = False
+    left, right = _twins(places, np.flatnonzero(single & ~places.body), components.area)
+    slash, ring = _slashed(places, holes)
+    first = np.concatenate((marks, upper, left, slash))
+    second = np.concatenate((hosts, lower, right, ring))
+    n, glyph = chains(first, second, components.n)
+    return Parts(places, glyph, n)
+
+
+def upright_type(places: Places, shapes: Shapes, spread: Spread) -> Places:
+    """The places with slanted type sheared upright, line by line.
+
+    The slant of a letter is that of its ink's regression of x on y; only tall and narrow letters
+    are asked, since the bowls of the others pull it to a side.
+    """
+    frame = shapes.frame
+    c, s, a = frame.cosine, frame.sine, frame.aspect
+    together = a * (c * c - s * s) * spread.xy + c * s * (spread.yy - a * a * spread.xx)
+    along = c * c * spread.yy - 2 * a * c * s * spread.xy + a * a * s * s * spread.xx
+    asked = (places.line >= 0) & (places.height > 1.2) & (places.width < 0.6 * places.height)
+    if not asked.any():
+        return places
+    leaning = -together[asked] / np.maximum(along[asked], 1e-9)
+    n = int(places.line.max()) + 1
+    line = places.line[asked]
+    few = np.bincount(line, minlength=n) < _LETTERS_FOR_SLANT
+    slant = grouped_median(line, n, leaning, 0.0)
+    slant[few] = np.median(leaning)
+    slant = np.clip(slant, -_STEEPEST, _STEEPEST)
+    slant[np.abs(slant) < _UPRIGHT] = 0.0
+    mine = np.where(places.line >= 0, slant[places.line], 0.0)
+    middle = places.middle - mine * (places.top + places.bottom) / 2
+    width = np.maximum(places.width - np.abs(mine) * places.height, 0.3 * places.width)
+    return replace(places, left=middle - width / 2, right=middle + width / 2)
+
+
+def _pairs(places: Places) -> tuple[Ints, Ints]:
+    """Pairs of components of one line that may share a stretch of it."""
+    some = np.flatnonzero(places.line >= 0)
+    order = some[np.lexsort((places.left[some], places.line[some]))]
+    i = np.concatenate([order[:-k] for k in range(1, _LOOK + 1)])
+    j = np.concatenate([order[k:] for k in range(1, _LOOK + 1)])
+    near = (places.line[i] == places.line[j]) & (places.left[j] < places.right[i] + 0.3)
+    return i[near], j[near]
+
+
+def _marks_and_letters(places: Places) -> tuple[Ints, Ints]:
+    """Dots and accents, and the letter that each stands over."""
+    asked = np.flatnonzero((places.line >= 0) & ~places.body & (places.bottom > 0.75))
+    bodies = places.bodies_near(asked)
+    mark = np.tile(asked, bodies.shape[0])
+    body = bodies.ravel()
+    mark, body = mark[body >= 0], body[body >= 0]
+    outside = np.maximum(places.left[body] - places.middle[mark], 0)
+    outside += np.maximum(places.middle[mark] - places.right[body], 0)
+    off = np.abs(places.middle[mark] - places.middle[body])
+    clear = places.bottom[mark] - places.top[body]
+    narrow, word = places.width[body] < 0.5, places.width[body] > 2.0
+    low = places.top[body] < 1.25
+    # an apostrophe is as high as an acute accent, but stands between letters
+    steep = places.height[mark] > 1.4 * places.width[mark]
+    fits = np.where(steep, (outside <= 0.02) | (narrow & (off < 0.3)), outside < 0.4)
+    fits &= np.where(word, places.bottom[mark] > 0.9, clear > -0.15)
+    fits &= clear < np.where(low & ~word, 1.0, 0.5)
+    fits &= places.width[mark] < places.width[body] + 0.8
+    cost = 2 * outside + 0.3 * off / np.maximum(places.width[body], 0.3) + 0.2 * clear + 0.3 * ~low
+    mark, body, cost = mark[fits], body[fits], cost[fits]
+    best = keyed_best(mark, cost)
+    return mark[best], body[best]
+
+
+def _stacked(
+    places: Places, i: Ints, j: Ints, area: Ints, hosted: Bools
+) -> tuple[Ints, Ints]:
+    """Upper and lower components that make one character, marks over letters aside."""
+    level = (places.top + places.bottom) / 2
+    swap = level[i] < level[j]
+    upper, lower = np.where(swap, j, i), np.where(swap, i, j)
+    free = ~hosted[upper] & ~hosted[lower]
+    upper, lower = upper[free], lower[free]
+    left, right, top, bottom = places.left, places.right, places.top, places.bottom
+    width, height, middle = places.width, places.height, places.middle
+    shared = np.minimum(right[upper], right[lower]) - np.maximum(left[upper], left[lower])
+    narrow = np.minimum(width[upper], width[lower])
+    wide = np.maximum(width[upper], width[lower])
+    off = np.abs(middle[upper] - middle[lower])
+    gap = bottom[upper] - top[lower]
+    small = ~places.body[lower] & (width[lower] < 0.6)
+    point = small & (bottom[lower] > -0.4) & (top[lower] < 0.5)
+    # ! and ?
+    marked = point & (bottom[upper] > 0.15) & (bottom[upper] < 0.75) & (height[upper] > 0.6)
+    marked &= (gap > 0.02) & (gap < 0.7) & (off < 0.35)
+    # : and ;
+    alike = np.maximum(area[upper], area[lower]) < 3.5 * np.minimum(area[upper], area[lower])
+    colon = small & ~places.body[upper] & (width[upper] < 0.6) & alike
+    colon &= (bottom[lower] > -0.8) & (bottom[lower] < 0.3) & (top[lower] < 0.65)
+    colon &= (top[upper] < 1.4) & (bottom[upper] > 0.2) & (gap > 0.05) & (gap < 1.1)
+    colon &= (shared > 0.5 * narrow) | (off < 0.25)
+    # = and the like
+    flat = (width[upper] > 1.5 * height[upper]) & (width[lower] > 1.5 * height[lower])
+    equals = flat & (narrow > 0.35) & (shared > 0.8 * wide) & (gap < 0.7)
+    # cedillas and dots below
+    below = small & places.body[upper] & (top[lower] < 0.1) & (np.abs(bottom[upper]) < 0.3)
+    below &= (off < 0.3 * width[upper]) & (gap > -0.08) & (gap < 0.3)
+    # letters broken across
+    broken = (shared > 0.6 * narrow) & (gap > -0.15) & (gap < 0.3) & (wide < 1.6)
+    broken &= (bottom[upper] < 1.2) & ~(point & (bottom[upper] < 0.15))
+    # a part inside the outline of a letter, unless it is a stop under an overhanging arm
+    inner = np.where(narrow == width[lower], lower, upper)
+    outer = np.where(inner == lower, upper, lower)
+    inside = (left[inner] > left[outer] - 0.02) & (right[inner] < right[outer] + 0.02)
+    inside &= (top[inner] < top[outer] + 0.05) & (bottom[inner] > bottom[outer] - 0.05)
+    stop = (bottom[inner] < 0.15) & (top[inner] < 0.5) & (middle[inner] > middle[outer])
+    inside &= ~stop & (width[outer] < 2.5)
+    joined = marked | colon | equals | below | broken | inside
+    return upper[joined], lower[joined]
+
+
+def _twins(places: Places, marks: Ints, area: Ints) -> tuple[Ints, Ints]:
+    """Pairs of single marks that are the two strokes of a quotation mark or guillemet."""
+    some = marks[places.line[marks] >= 0]
+    (right,) = keyed_neighbours(places.line, places.middle, some, some, 1)[1:]
+    left, right = some[right >= 0], right[right >= 0]
+    high = np.maximum(places.height[left], places.height[right])
+    wide = np.maximum(places.width[left], places.width[right])
+    level = np.abs(places.top[left] - places.top[right]) < 0.25
+    level &= np.abs(places.bottom[left] - places.bottom[right]) < 0.25
+    alike = np.maximum(area[left], area[right]) < 2 * np.minimum(area[left], area[right])
+    gap = places.left[right] - places.right[left]
+    near = (gap < 0.4) & (gap < 1.3 * wide + 0.1)
+    raised = places.bottom[left] > 0.5
+    hanging = (places.bottom[left] < 0.0) & (high > 1.3 * wide)
+    chevrons = (places.bottom[left] > 0.02) & (places.top[left] < 0.95) & (high > 0.3) & (gap < 0.2)
+    fits = level & alike & near & (raised | hanging | chevrons)
+    # of three in a row only one pair is a twin
+    left, right, gap = left[fits], right[fits], gap[fits]
+    best = keyed_best(left, gap) & keyed_best(right, gap)
+    left, right, gap = left[best], right[best], gap[best]
+    taken = np.isin(left, right)
+    return left[~taken], right[~taken]
+
+
+def _slashed(places: Places, holes: Ints) -> tuple[Ints, Ints]:
+    """Slashes with what stands before their upper and behind their lower half: % and 1/2."""
+    slash = np.flatnonzero(places.body & (holes == 0) & (places.height > 1.1))
+    near = keyed_neighbours(places.line, places.middle, np.flatnonzero(places.line >= 0), slash, 2)
+    upper, lower = np.full((2, slash.size), -1, np.int64)
+    for thing in near:
+        part = np.maximum(thing, 0)
+        size = (thing >= 0) & (places.height[part] > 0.35) & (places.height[part] < 0.95)
+        before = places.middle[slash] - places.middle[part]
+        overlap = np.minimum(places.right[slash], places.right[part]) - np.maximum(
+            places.left[slash], places.left[part]
+        )
+        size &= overlap > -0.15
+        first = size & (places.bottom[part] > 0.4) & (before > 0.1) & (before < 1.0)
+        second = size & (places.top[part] < 1.0) & (before < -0.1) & (before > -1.0)
+        upper[first], lower[second] = thing[first], thing[second]
+    both = (upper >= 0) & (lower >= 0)
+    return np.tile(slash[both], 2), np.concatenate((upper[both], lower[both]))
