@@ -25,6 +25,8 @@ from typing import Any
 from scanclean.edges import EdgeSettings
 from scanclean.errors import RecipeError
 from scanclean.holes import HoleSettings
+from scanclean.ruling import RuleSettings
+from scanclean.specks import SpeckSettings
 from scanclean.steps import Step
 from scanclean.threshold import ThresholdSettings
 from scanclean.units import Length
@@ -49,7 +51,9 @@ class Recipe:
 
     threshold: ThresholdSettings = field(default_factory=ThresholdSettings)
     edges: EdgeSettings = field(default_factory=EdgeSettings)
+    rules: RuleSettings = field(default_factory=RuleSettings)
     holes: HoleSettings = field(default_factory=HoleSettings)
+    specks: SpeckSettings = field(default_factory=SpeckSettings)
     steps: tuple[Step, ...] = ()
 
     @cached_property

@@ -21,7 +21,7 @@ from scanclean.units import Length, Resolution
 
 __all__ = ["OPERATIONS", "PLACES", "Step"]
 
-PLACES = ("threshold", "edges", "rules", "specks", "holes")
+PLACES = ("threshold", "edges", "rules", "holes", "specks")
 
 _SHAPES = {
     "line": ("length",),
