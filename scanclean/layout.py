@@ -128,6 +128,8 @@ class Layout:
             "flags": list(self.flags),
         }
         members = [f"{_dump(key)}: {_dump(value)}" for key, value in head.items()]
+        # a file's name may hold bytes that are no text: they are escaped as JSON allows
+        members = [each.encode("utf-8", "backslashreplace").decode("utf-8") for each in members]
         tables = {"lines": self.lines, "glyphs": self.glyphs, "rules": self.rules}
         members += [f"{_dump(key)}: {_table_json(table)}" for key, table in tables.items()]
         return "{\n  " + ",\n  ".join(members) + "\n}\n"

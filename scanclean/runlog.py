@@ -198,9 +198,10 @@ def recorded_results(folder: Path) -> set[str] | None:
 def _read(path: Path) -> bytes:
     if not os.path.lexists(path):
         return b""
+    if not path.is_file():  # a device could be read for ever
+        raise OutputError(f"{shown(path)}: is no regular file; move it away")
     try:
         return path.read_bytes()
     except OSError as error:
-        raise OutputError(
-            f"{shown(path)}: cannot be read: {reason(error)}; move it away"
-        ) from error
+        message = f"{shown(path)}: cannot be read ({reason(error)}); move it away"
+        raise OutputError(message) from error

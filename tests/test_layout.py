@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import copy
 import json
+import os
 import time
+from dataclasses import replace
 
 import jsonschema
 import numpy as np
@@ -284,6 +286,15 @@ def test_a_layout_comes_back_as_it_was_and_is_valid(layout):
             assert table[name].dtype.kind == was[name].dtype.kind
             assert np.array_equal(table[name], was[name])
     assert again.to_json() == text
+
+
+def test_names_of_any_bytes_come_back():
+    layout = agreed()
+    name = os.fsdecode(b"caf\xe9 \xc3\xa9.png")
+    layout = Layout(**{**vars(layout), "source": replace(layout.source, file=name)})
+    text = layout.to_json().encode("utf-8")
+    assert b'"caf\\udce9 \xc3\xa9.png"' in text
+    assert Layout.from_json(text).source.file == name
 
 
 def test_numbers_are_rounded_to_fixed_places():

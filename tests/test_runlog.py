@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+from pathlib import Path
 
 import pytest
 from hypothesis import given
@@ -127,10 +128,23 @@ def test_a_record_that_cannot_be_written_is_told_and_kept_for_later(tmp_path):
 
 
 def test_a_record_that_cannot_be_read_is_refused(tmp_path):
-    (tmp_path / RUN_LOG).mkdir()
-    with pytest.raises(OutputError, match=r"run\.jsonl: cannot be read"):
+    for target in ("/dev/zero", ".", "nowhere"):  # to be read for ever, a folder, nothing
+        (tmp_path / RUN_LOG).symlink_to(target)
+        with pytest.raises(OutputError, match=r"run\.jsonl: is no regular file; move it away"):
+            RunLog(tmp_path)
+        assert recorded_results(tmp_path) is None
+        (tmp_path / RUN_LOG).unlink()
+
+
+def test_a_record_that_the_disk_does_not_give_is_refused(tmp_path, monkeypatch):
+    (tmp_path / RUN_LOG).write_text("")
+    monkeypatch.setattr(Path, "read_bytes", _refuse)
+    with pytest.raises(OutputError, match=r"run\.jsonl: cannot be read \(Permission denied\)"):
         RunLog(tmp_path)
-    assert recorded_results(tmp_path) is None
+
+
+def _refuse(path):
+    raise PermissionError(13, "Permission denied", str(path))
 
 
 def test_results_that_a_record_lists_are_known(tmp_path):
