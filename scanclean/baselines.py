@@ -130,10 +130,15 @@ class Baselines:
         bend = (2 * a[2] + 4 * a[4]) * np.sign(t) + 3 * a[3]
         return y + (a[1] + np.clip(bend, -steepest, steepest)) * (t - inside)
 
-    def keep(self, chosen: Bools) -> Baselines:
-        """The chosen groups."""
-        columns = (self.left, self.right, self.coefficients, self.height, self.size)
-        return Baselines(*(column[chosen] for column in columns))
+    def keep(self, chosen: Bools | Ints) -> Baselines:
+        """The chosen groups, by a mask or in an order."""
+        return Baselines(
+            self.left[chosen],
+            self.right[chosen],
+            self.coefficients[chosen],
+            self.height[chosen],
+            self.size[chosen],
+        )
 
 
 def fit_baselines(slices: Slices, group: Ints, n: int, *, scale: float) -> Baselines:

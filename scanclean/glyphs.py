@@ -18,11 +18,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.labels import Components
-from scanclean.neighbours import chains, grouped_median, keyed_best, keyed_neighbours
+from scanclean.neighbours import chains, keyed_best, keyed_neighbours, repeat_range
 from scanclean.places import Places, find_places
+from scanclean.slant import line_slants
 from scanclean.textlines import LineSet
 from scanclean.textmeasure import Spread, measure_spread
-from scanclean.upright import Shapes, place
+from scanclean.upright import place
 
 __all__ = ["Parts", "join_parts"]
 
@@ -30,9 +31,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
-_STEEPEST = 0.7  # slant of any writing, x over y
-_UPRIGHT = 0.08  # less is none
-_LETTERS_FOR_SLANT = 5
+_BREAK_OF_STROKE = 0.3  # width of a break that wear makes, of the stroke's
 _LOOK = 5  # components further along the line that may still overlap
 
 
@@ -70,7 +69,8 @@ def join_parts(
     """
     spread = spread or measure_spread(components)
     shapes = place(components, spread, lines.frame)
-    places = upright_type(find_places(lines, shapes), shapes, spread)
+    places = find_places(lines, shapes)
+    places = upright_type(places, line_slants(components, lines, places.line))
     holes = components.holes
     marks, hosts = _marks_and_letters(places)
     hosted = np.zeros(components.n, bool)
@@ -80,37 +80,32 @@ def join_parts(
     single = ~hosted
     single[upper] = single[lower] = False
     left, right = _twins(places, np.flatnonzero(single & ~places.body), components.area)
+    angles = np.flatnonzero(single & _angle_like(components, places))
+    left, right = np.concatenate(((left, right), _guillemets(places, angles)), axis=1)
     slash, ring = _slashed(places, holes)
-    first = np.concatenate((marks, upper, left, slash))
-    second = np.concatenate((hosts, lower, right, ring))
+    for joined in (left, right, slash, ring):
+        single[joined] = False
+    piece, whole = _broken_off(components, places, np.flatnonzero(single & ~places.body))
+    first = np.concatenate((marks, upper, left, slash, piece))
+    second = np.concatenate((hosts, lower, right, ring, whole))
     n, glyph = chains(first, second, components.n)
     return Parts(places, glyph, n)
 
 
-def upright_type(places: Places, shapes: Shapes, spread: Spread) -> Places:
-    """The places with slanted type sheared upright, line by line.
+def upright_type(places: Places, slants: Floats) -> Places:
+    """The places with slanted type sheared upright about the baseline, line by line.
 
-    The slant of a letter is that of its ink's regression of x on y; only tall and narrow letters
-    are asked, since the bowls of the others pull it to a side.
+    Parameters
+    ----------
+    places : Places
+    slants : (L,) float array
+        Of `slant.line_slants`.
     """
-    frame = shapes.frame
-    c, s, a = frame.cosine, frame.sine, frame.aspect
-    together = a * (c * c - s * s) * spread.xy + c * s * (spread.yy - a * a * spread.xx)
-    along = c * c * spread.yy - 2 * a * c * s * spread.xy + a * a * s * s * spread.xx
-    asked = (places.line >= 0) & (places.height > 1.2) & (places.width < 0.6 * places.height)
-    if not asked.any():
+    if slants.size == 0:
         return places
-    leaning = -together[asked] / np.maximum(along[asked], 1e-9)
-    n = int(places.line.max()) + 1
-    line = places.line[asked]
-    few = np.bincount(line, minlength=n) < _LETTERS_FOR_SLANT
-    slant = grouped_median(line, n, leaning, 0.0)
-    slant[few] = np.median(leaning)
-    slant = np.clip(slant, -_STEEPEST, _STEEPEST)
-    slant[np.abs(slant) < _UPRIGHT] = 0.0
-    mine = np.where(places.line >= 0, slant[places.line], 0.0)
-    middle = places.middle - mine * (places.top + places.bottom) / 2
-    width = np.maximum(places.width - np.abs(mine) * places.height, 0.3 * places.width)
+    slant = np.where(places.line >= 0, slants[places.line], 0.0)
+    middle = places.middle - slant * (places.top + places.bottom) / 2
+    width = np.maximum(places.width - np.abs(slant) * places.height, 0.3 * places.width)
     return replace(places, left=middle - width / 2, right=middle + width / 2)
 
 
@@ -135,11 +130,13 @@ def _marks_and_letters(places: Places) -> tuple[Ints, Ints]:
     outside += np.maximum(places.middle[mark] - places.right[body], 0)
     off = np.abs(places.middle[mark] - places.middle[body])
     clear = places.bottom[mark] - places.top[body]
-    narrow, word = places.width[body] < 0.5, places.width[body] > 2.0
+    word = places.width[body] > 2.0
     low = places.top[body] < 1.25
+    narrow = places.width[body] < 0.5
     # an apostrophe is as high as an acute accent, but stands between letters
     steep = places.height[mark] > 1.4 * places.width[mark]
-    fits = np.where(steep, (outside <= 0.02) | (narrow & (off < 0.3)), outside < 0.4)
+    fits = np.where(steep, outside <= 0.02, outside <= 0.05)
+    fits |= narrow & low & np.where(steep, off < 0.3, outside < 0.4)
     fits &= np.where(word, places.bottom[mark] > 0.9, clear > -0.15)
     fits &= clear < np.where(low & ~word, 1.0, 0.5)
     fits &= places.width[mark] < places.width[body] + 0.8
@@ -210,14 +207,77 @@ def _twins(places: Places, marks: Ints, area: Ints) -> tuple[Ints, Ints]:
     near = (gap < 0.4) & (gap < 1.3 * wide + 0.1)
     raised = places.bottom[left] > 0.5
     hanging = (places.bottom[left] < 0.0) & (high > 1.3 * wide)
-    chevrons = (places.bottom[left] > 0.02) & (places.top[left] < 0.95) & (high > 0.3) & (gap < 0.2)
-    fits = level & alike & near & (raised | hanging | chevrons)
-    # of three in a row only one pair is a twin
-    left, right, gap = left[fits], right[fits], gap[fits]
+    fits = level & alike & near & (raised | hanging)
+    return _closest(left[fits], right[fits], gap[fits])
+
+
+def _angle_like(components: Components, places: Places) -> Bools:
+    """(C,) what may be half of a guillemet: thin, low, level about its middle, a stroke a row."""
+    height = components.box[:, 3] - components.box[:, 1]
+    width = components.box[:, 2] - components.box[:, 0]
+    off = np.abs(components.centroid[:, 1] - (components.box[:, 1] + components.box[:, 3]) / 2)
+    thin = (components.n_runs <= 1.2 * height) & (components.area < 0.6 * width * height)
+    low = (places.line >= 0) & (places.height > 0.3) & (places.height < 1.0)
+    return thin & low & (off < 0.06 * height) & (places.bottom > 0.02) & (places.top < 1.0)
+
+
+def _guillemets(places: Places, angles: Ints) -> tuple[Ints, Ints]:
+    """Pairs of the components asked that stand close and are alike."""
+    right = keyed_neighbours(places.line, places.middle, angles, angles, 1)[1]
+    left, right = angles[right >= 0], right[right >= 0]
+    fits = np.abs(places.top[left] - places.top[right]) < 0.12
+    fits &= np.abs(places.bottom[left] - places.bottom[right]) < 0.12
+    fits &= np.abs(places.width[left] - places.width[right]) < 0.12
+    gap = places.left[right] - places.right[left]
+    fits &= (gap < 0.2) & (gap > -0.3)
+    return _closest(left[fits], right[fits], gap[fits])
+
+
+def _closest(left: Ints, right: Ints, gap: Floats) -> tuple[Ints, Ints]:
+    """Pairs of which no member is in another; of three in a row the closer two."""
     best = keyed_best(left, gap) & keyed_best(right, gap)
-    left, right, gap = left[best], right[best], gap[best]
-    taken = np.isin(left, right)
-    return left[~taken], right[~taken]
+    left, right = left[best], right[best]
+    free = ~np.isin(left, right)
+    return left[free], right[free]
+
+
+def _broken_off(
+    components: Components, places: Places, asked: Ints
+) -> tuple[Ints, Ints]:
+    """Pieces broken off letters, and the letter that each belongs to.
+
+    A piece lies against its letter, as close as a worn stroke breaks, and does not make it wider
+    by what a mark of its own would take.
+    """
+    runs, label = components.runs, components.run_label
+    chosen = np.zeros(components.n, bool)
+    chosen[asked] = True
+    chosen &= places.line >= 0
+    mine = np.flatnonzero(chosen[label])
+    if mine.size == 0:
+        return asked[:0], asked[:0]
+    letters = places.body[label]
+    stroke = float(np.median(runs.length[letters])) if letters.any() else 1.0
+    reach = max(1, round(_BREAK_OF_STROKE * stroke)) + 1
+    start, stop = runs.bounds[0::2], runs.bounds[1::2]
+    pieces, wholes = [], []
+    for step in range(-reach, reach + 1):
+        row = step * (runs.shape[1] + 1)
+        low = np.searchsorted(stop, start[mine] + row - reach, side="right")
+        high = np.searchsorted(start, stop[mine] + row + reach, side="left")
+        owner, other = repeat_range(low, np.maximum(high, low))
+        pieces.append(label[mine[owner]])
+        wholes.append(label[other])
+    piece, whole = np.concatenate(pieces).astype(np.int64), np.concatenate(wholes).astype(np.int64)
+    fits = (places.line[piece] == places.line[whole]) & places.body[whole]
+    wider = np.maximum(places.right[piece], places.right[whole]) - np.minimum(
+        places.left[piece], places.left[whole]
+    )
+    wider -= places.width[whole]
+    fits &= (wider < 0.25) & (places.bottom[piece] > -0.8) & (places.width[whole] < 2.5)
+    piece, whole, wider = piece[fits], whole[fits], wider[fits]
+    best = keyed_best(piece, wider)
+    return piece[best], whole[best]
 
 
 def _slashed(places: Places, holes: Ints) -> tuple[Ints, Ints]:

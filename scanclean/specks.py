@@ -131,50 +131,66 @@ def _is_mark(places: Places, asked: Ints, area: Floats, dot: float) -> Bools:
     top, bottom = places.top[asked], places.bottom[asked]
     middle, level = places.middle[asked], (top + bottom) / 2
     width, height = places.width[asked], places.height[asked]
-    gap_before = np.full(asked.size, np.inf)
-    gap_behind = np.full(asked.size, np.inf)
-    over, under, within = np.zeros((3, asked.size), bool)
+    dots = area[asked] / dot
+    gap_before, gap_behind = np.full((2, asked.size), np.inf)
+    over_i, over, under, within = np.zeros((4, asked.size), bool)
     for near in places.bodies_near(asked):
         there = near >= 0
         body = np.maximum(near, 0)
-        left, right = places.left[body], places.right[body]
+        left, right, head = places.left[body], places.right[body], places.top[body]
         before = there & (places.middle[body] <= middle)
         behind = there & ~before
         gap_before[before] = np.minimum(gap_before, places.left[asked] - right)[before]
         gap_behind[behind] = np.minimum(gap_behind, left - places.right[asked])[behind]
         beside = there & (middle > left - 0.35) & (middle < right + 0.35)
         # a whole word of a running hand is higher in places than where its dots are
-        word = right - left > 2.0
-        lowest = np.where(word, 0.9, places.top[body] - 0.12)
-        clear = np.where(~word & (places.top[body] < 1.25), 1.0, 0.5)
-        over |= beside & (bottom >= lowest) & (bottom - places.top[body] < clear)
+        word, low = right - left > 2.0, head < 1.25
+        lowest = np.where(word, 0.9, head - 0.12)
+        clear = np.where(~word & low, 1.0, 0.5)
+        stands = beside & (bottom >= lowest) & (bottom - head < clear)
+        over |= stands
+        over_i |= stands & (word | (low & (right - left < 0.7)))
         inside = there & (middle > left) & (middle < right)
-        under |= inside & (top < places.bottom[body] + 0.1) & (places.bottom[body] - top < 0.3)
-        within |= inside
+        foot = places.bottom[body]
+        under |= inside & (top < foot + 0.1) & (foot - top < 0.3)
+        # under an overhanging arm there is room for a stop, in the middle of a letter there is not
+        within |= inside & ~word & (middle > left + 0.15) & (middle < (left + right) / 2 + 0.15)
     gap = np.minimum(gap_before, gap_behind)
-    on_baseline = (bottom > -0.85) & (bottom < 0.3) & (top > -0.15) & (top < 0.7)
+    on_baseline = (bottom > -0.85) & (bottom < 0.3) & (top > -0.15) & (top < 0.7) & ~within
     on_baseline &= (gap_before < 1.8) | (gap_behind < 1.2)
-    raised = (top > 0.95) & (top < 2.3) & (bottom > 0.45) & (gap < 2.0)
+    raised = (top > 0.95) & (top < 2.3) & (bottom > 0.45) & (gap < 2.0) & (dots > 0.6)
     dash = (width > 1.5 * height) & (width > 0.25) & (gap < 2.0)
     dash &= (level > np.where(width > 0.5, -0.1, 0.15)) & (level < np.where(width > 0.5, 1.1, 0.85))
-    centred = (level > 0.3) & (level < 1.05) & (gap < 1.2) & ~within & (area[asked] > 0.5 * dot)
-    placed = on_baseline | raised | dash | centred | over | under
-    placed &= area[asked] >= _LEAST_OF_DOT * dot
-    return placed | _over_another(places, asked, placed, area)
+    centred = (level > 0.3) & (level < 1.05) & (gap < 1.2) & ~within & (dots > 0.8)
+    # an accent is no smaller than a dot, unless it is one of two dots
+    accent = over & (dots > 0.75)
+    placed = on_baseline | raised | dash | centred | over_i | accent | under
+    placed &= dots >= _LEAST_OF_DOT
+    mates = dots >= _LEAST_OF_DOT
+    beside = over & mates & _has_mate(places, asked, mates, area, over=False)
+    return placed | beside | (mates & _has_mate(places, asked, placed, area, over=True))
 
 
-def _over_another(places: Places, asked: Ints, placed: Bools, area: Floats) -> Bools:
-    """(M,) which small components make a colon or the like with a mark under or over them."""
-    mates = keyed_neighbours(places.line, places.middle, asked[placed], asked, 2)
+def _has_mate(places: Places, asked: Ints, among: Bools, area: Floats, *, over: bool) -> Bools:
+    """(M,) which small components have one like them over or under them, as in a colon, or beside."""
+    near = keyed_neighbours(places.line, places.middle, asked[among], asked, 2)
     found = np.zeros(asked.size, bool)
-    for mate in mates:
+    for mate in near:
         other = np.maximum(mate, 0)
-        aligned = (mate >= 0) & (np.abs(places.middle[other] - places.middle[asked]) < 0.35)
+        aside = np.abs(places.middle[other] - places.middle[asked])
         apart = np.maximum(places.bottom[other] - places.top[asked], 0)
         apart += np.maximum(places.bottom[asked] - places.top[other], 0)
-        alike = np.maximum(area[other], area[asked]) < 3 * np.minimum(area[other], area[asked])
-        found |= aligned & alike & (apart > 0.05) & (apart < 1.0)
-    return found & (places.top[asked] < 1.4) & (places.bottom[asked] > -0.6)
+        factor = 3 if over else 2
+        alike = np.maximum(area[other], area[asked]) < factor * np.minimum(area[other], area[asked])
+        if over:
+            fits = (aside < 0.35) & (apart > 0.05) & (apart < 1.0)
+        else:
+            level = np.abs(places.bottom[other] - places.bottom[asked])
+            fits = (aside > 0.15) & (aside < 0.9) & (level < 0.2)
+        found |= (mate >= 0) & alike & fits
+    if over:
+        found &= (places.top[asked] < 1.4) & (places.bottom[asked] > -0.6)
+    return found
 
 
 def _is_hair(components: Components, shapes: Shapes, stroke: float) -> Bools:

@@ -128,8 +128,8 @@ class LineSet:
             least[some[better]] = cost[better]
         return best
 
-    def keep(self, chosen: Bools) -> LineSet:
-        """The chosen lines."""
+    def keep(self, chosen: Bools | Ints) -> LineSet:
+        """The chosen lines, by a mask or in an order."""
         return LineSet(
             self.frame,
             self.baselines.keep(chosen),
