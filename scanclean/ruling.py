@@ -1,8 +1,8 @@
-"""Ruled lines: found, told from strokes, and subtracted in optical density.
+"""Ruled lines: where they are, which of them are rules, and what to take out for them.
 
-Light passes one layer of ink after another, so densities add up (Beer-Lambert law): where a stroke
-crosses a rule, the page has the density of both. What a rule has by itself is known from its track;
-what the page has beyond it is the stroke's, and nothing needs to be guessed at.
+Tracks are found in each direction and measured; long straight ones that stand alone for enough of
+their length are rules, short ones where other rules say so. What of the ink is theirs is left to
+`removal`.
 """
 
 from __future__ import annotations
@@ -14,11 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.density import DENSITY, Tone
-from scanclean.elements import box
 from scanclean.frames import Segments, hatched, short_rules, worth_measuring
-from scanclean.labels import label
-from scanclean.morphology import dilate
 from scanclean.profiles import Lines, measure_lines
+from scanclean.removal import RuledLines, rule_pixels
 from scanclean.runs import RunSet
 from scanclean.settings import setting
 from scanclean.smoothing import weighted_median
@@ -41,14 +39,17 @@ _FAINTEST = 0.92  # of the paper: what is darker may be a rule, faded ones inclu
 _STEADY, _STEADY_SHORT = 0.22, 0.35  # roughness; letters in a row have 0.27 and more
 _BATCH = 1 << 21  # samples measured at a time
 
-# what is subtracted and what is kept
-_INK = 0.1  # residual density of a stroke
-_SIGMAS = 3.2
+_STROKE = 0.1  # density in a line's flank from which on it is a stroke
 _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a density
-_FRINGE_PX = 1.0  # beside a line, still judged by its profile
-_STEPS = 100.0  # of density in a byte
-_SPECK_MM2, _CROSSING_MM2 = 0.1, 0.5  # loose pieces that are a stroke's, at crossings of rules too
-_HORIZONTAL, _VERTICAL, _DOUBTFUL = 1, 2, 4  # flags of the pixels of rules
+
+# of a bitonal scan the share of ink along a line stands for density
+_COVER = (0.8 * (1 - np.arange(256) / 255)).astype(np.float32)
+_COVER_MM = 0.34  # over so much on both sides
+_HALF = 0.63  # of the scale: more than a third of the pixels are ink
+
+# a rule is saturated where it leaves a stroke so little to add
+_ADDS = 0.12
+_INK = 0.3  # density of what is ink for sure
 
 
 @dataclass(frozen=True)
@@ -136,22 +137,51 @@ def find_rules(
     Ruling
     """
     nothing = RunSet.empty(ink.shape)
-    if not settings.enabled or not ink or tone is None:
+    if not settings.enabled or not ink:
         return Ruling((), nothing, nothing)
+    noise = None if tone is None else tone.noise
+    pages = _covers(ink, resolution) if tone is None else (tone.ratio, tone.ratio.T)
     sides = tuple(
-        _Side(tone.ratio.T if vertical else tone.ratio, vertical, tone.noise, resolution, settings)
-        for vertical in (False, True)
+        _Side(page, vertical, noise, resolution, settings)
+        for page, vertical in zip(pages, (False, True), strict=True)
     )
-    _accept_long(sides, settings)
+    _accept_long(sides)
     if settings.frames:
         _accept_short(sides)
     if settings.directions != "both":
         # the other direction has borne witness, its lines stay
         sides = tuple(s for s in sides if s.vertical == (settings.directions == "vertical"))
-    rules = tuple(rule for side in sides for rule in side.records())
-    if not rules:
+    if not any(is_rule.any() for side in sides for _, is_rule in side.found):
         return Ruling((), nothing, nothing)
-    return Ruling(rules, _subtract(ink, tone, sides, resolution), nothing)
+    limit = -np.inf if tone is None else _saturation(tone)
+    rules = tuple(rule for side in sides for rule in side.records(limit))
+    ruled = [part for side in sides for part in side.ruled(limit)]
+    ratio = None if tone is None else tone.ratio
+    taken = rule_pixels(ink, ratio, noise or 0.0, ruled, resolution)
+    return Ruling(rules, taken, nothing)
+
+
+def _covers(ink: RunSet, resolution: Resolution) -> tuple[Bytes, Bytes]:
+    """A bitonal page averaged along x and along y, the second one turned; 255 is paper."""
+    from PIL import Image, ImageFilter
+
+    page = Image.fromarray(np.where(ink.to_mask(), np.uint8(0), np.uint8(255)))
+    along_x = ImageFilter.BoxBlur((max(1, round(_COVER_MM * resolution.x_mm)), 0))
+    along_y = ImageFilter.BoxBlur((0, max(1, round(_COVER_MM * resolution.y_mm))))
+    return np.asarray(page.filter(along_x)), np.asarray(page.filter(along_y)).T
+
+
+def _saturation(tone: Tone) -> float:
+    """Density from which on a rule is as dark as the darkest the page has."""
+    from PIL import Image
+
+    count = np.array(Image.fromarray(tone.ratio).histogram())
+    count[DENSITY <= _INK] = 0
+    if not count.any():
+        return np.inf
+    total = np.cumsum(count)
+    darkest = float(DENSITY[np.searchsorted(total, 0.005 * total[-1])])
+    return darkest - _ADDS
 
 
 # ---- which lines are rules
@@ -164,21 +194,22 @@ class _Side:
         self,
         page: Bytes,
         vertical: bool,
-        noise: float,
+        noise: float | None,
         resolution: Resolution,
         settings: RuleSettings,
     ) -> None:
         self.page, self.vertical = page, vertical
+        self.table = _COVER if noise is None else DENSITY
         turned = resolution.transposed if vertical else resolution
         self.mm, self.mm_across = turned.x_mm, turned.y_mm
         self.min_length = settings.min_length.px(turned.x) / self.mm
         self.max_thickness = settings.max_thickness.px(turned.y)
-        self.stroke = max(_INK, 5 * _PER_RATIO * noise)
+        self.stroke = max(_STROKE, 5 * _PER_RATIO * (noise or 0.0))
         tracks = find_tracks(
             page,
             mm_along=self.mm,
             mm_across=self.mm_across,
-            level=255 * min(_FAINTEST, 1 - 2.5 * noise),
+            level=255 * (_HALF if noise is None else min(_FAINTEST, 1 - 2.5 * noise)),
             max_thickness=self.max_thickness,
         )
         leaning = np.abs(tracks.slope) * self.mm / self.mm_across
@@ -192,7 +223,8 @@ class _Side:
             np.zeros(len(self.tracks)),
         )
         self.accepted = np.zeros(len(self.tracks), bool)
-        self.found: list[tuple[Lines, Bools]] = []  # measured lines, and which of them are rules
+        # measured lines, and which of them are rules
+        self.found: list[tuple[Lines, Bools]] = []
 
     def measure(self, chosen: Ints, reach_mm: float) -> Iterator[tuple[Ints, Lines]]:
         """Lines of some tracks, those of like thickness together, and not too many at a time."""
@@ -263,13 +295,28 @@ class _Side:
         )
         return straight & (lines.isolated() >= 0.3) & (lines.peak >= 0.03)
 
-    def records(self) -> list[Rule]:
-        """The rules, from the first one across the page to the last."""
-        found = [rule for lines, is_rule in self.found for rule in self._records(lines, is_rule)]
+    def ruled(self, limit: float) -> list[RuledLines]:
+        """The rules' columns; shape decides on lines of a density above the limit."""
+        return [
+            RuledLines(
+                lines,
+                self.vertical,
+                self.extent(lines) & is_rule[lines.track],
+                is_rule & (lines.peak > limit),
+            )
+            for lines, is_rule in self.found
+            if is_rule.any()
+        ]
+
+    def records(self, limit: float) -> list[Rule]:
+        """The rules, from the first one across the page to the last; `limit` as of `ruled`."""
+        found = [
+            rule for lines, is_rule in self.found for rule in self._records(lines, is_rule, limit)
+        ]
         axis = 0 if self.vertical else 1
         return sorted(found, key=lambda rule: (float(np.median(rule.centre[:, axis])), rule.box))
 
-    def _records(self, lines: Lines, is_rule: Bools) -> Iterator[Rule]:
+    def _records(self, lines: Lines, is_rule: Bools, limit: float) -> Iterator[Rule]:
         extent, thickness = self.extent(lines), lines.thickness()
         step = max(1, round(self.mm))
         begin = np.searchsorted(lines.track, np.arange(len(lines) + 1))
@@ -286,12 +333,12 @@ class _Side:
                 (top, left, bottom, right) if self.vertical else (left, top, right, bottom),
                 float(thickness[i]),
                 float(lines.peak[i]),
-                "density",
+                "shape" if lines.peak[i] > limit else "density",
                 points[:, ::-1] if self.vertical else points,
             )
 
 
-def _accept_long(sides: tuple[_Side, ...], settings: RuleSettings) -> None:
+def _accept_long(sides: tuple[_Side, ...]) -> None:
     """Find the lines that are rules by themselves."""
     for side in sides:
         length = side.segments.length
@@ -352,75 +399,3 @@ def _usual_thickness(found: list[tuple[Lines, Bools]]) -> float:
 
 def _is_usual(lines: Lines, usual: float) -> Bools:
     return np.asarray(lines.high - lines.low <= max(1.5 * usual, usual + 2))
-
-
-# ---- which pixels are rule and nothing else
-
-
-def _subtract(ink: RunSet, tone: Tone, sides: tuple[_Side, ...], resolution: Resolution) -> RunSet:
-    """The ink that is no darker than the rules alone would be."""
-    predicted = np.zeros(ink.shape, np.uint8)  # density of the rules, in hundredths
-    flags = np.zeros(ink.shape, np.uint8)
-    for side in sides:
-        turn = np.transpose if side.vertical else np.asarray
-        for lines, is_rule in side.found:
-            _lay(
-                lines,
-                is_rule[lines.track] & side.extent(lines),
-                turn(predicted),
-                turn(flags),
-                _VERTICAL if side.vertical else _HORIZONTAL,
-            )
-    zone = np.flatnonzero(flags)
-    flag, step = flags.ravel()[zone], predicted.ravel()[zone]
-    # a pixel is a stroke's where the page is darker than the rule by more than noise explains;
-    # the noise of a density grows with the density
-    rule = np.arange(256) / _STEPS
-    margin = np.maximum(_INK, _SIGMAS * _PER_RATIO * tone.noise * 10 ** np.minimum(rule, 1.2))
-    darkest = 255 * 10.0 ** -(rule + margin)
-    darkest_sure = 255 * 10.0 ** -(rule + 1.5 * margin)
-    ratio = tone.ratio.ravel()[zone]
-    is_stroke = ratio < np.where(flag & _DOUBTFUL, darkest[step], darkest_sure[step])
-
-    ruled = _points(ink.shape, zone) & ink
-    strokes = _points(ink.shape, zone[is_stroke]) & ink
-    both = _HORIZONTAL | _VERTICAL
-    crossings = _points(ink.shape, zone[(flag & both) == both])
-    loose = _loose(strokes, ink - ruled, crossings, resolution)
-    return ruled - (strokes - loose)
-
-
-def _lay(lines: Lines, live: Bools, predicted: Bytes, flags: Bytes, flag: int) -> None:
-    """Enter the density of lines, in their live columns, into the page's."""
-    some = np.flatnonzero(live)
-    row, column, density = lines.predicted(some, _FRINGE_PX)
-    i, j = np.nonzero((density >= 0) & (row >= 0) & (row < predicted.shape[0]))
-    y, x = row[i, j], column[i]
-    step = np.minimum(_STEPS * density[i, j] + 0.5, 255).astype(np.uint8)
-    predicted[y, x] = np.maximum(predicted[y, x], step)
-    flags[y, x] |= np.where(lines.sure[some[i]], flag, flag | _DOUBTFUL).astype(np.uint8)
-
-
-def _points(shape: tuple[int, int], flat: Ints) -> RunSet:
-    """The set of pixels at flat positions y W + x, given in rising order."""
-    place = flat + flat // shape[1]  # a page of runs has one column more
-    begins = np.diff(place, prepend=-2) != 1
-    ends = np.append(begins[1:], True)[: place.size]
-    bounds = np.stack((place[begins], place[ends] + 1), axis=1)
-    return RunSet(shape, bounds.ravel())
-
-
-def _loose(strokes: RunSet, ink: RunSet, crossings: RunSet, resolution: Resolution) -> RunSet:
-    """Residue that touches no ink beside the rules and is too small for a stroke."""
-    mm2 = resolution.x_mm * resolution.y_mm
-    pieces = label(strokes)
-    pieces = pieces.select(pieces.area < _CROSSING_MM2 * mm2)
-    if pieces.n == 0:
-        return pieces.runs
-    around = dilate(pieces.runs, box(3, 3))
-    touched = pieces.touching(dilate(around & ink, box(3, 3)))
-    small = pieces.area < _SPECK_MM2 * mm2
-    crossed = pieces.runs & crossings
-    owner = np.searchsorted(pieces.runs.bounds[0::2], crossed.bounds[0::2], side="right") - 1
-    at_crossing = np.bincount(pieces.run_label[owner], crossed.length, pieces.n)
-    return pieces.keep(~touched & (small | (2 * at_crossing > pieces.area)))

@@ -1,0 +1,224 @@
+"""Which pixels of the ink are rule and nothing else.
+
+Light passes one layer of ink after another, so densities add up (Beer-Lambert law): where a stroke
+crosses a rule, the page has the density of both. What a rule has by itself is known from its track;
+what the page has beyond it is the stroke's. Where there is no tone to tell, shape decides.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanclean.crossings import edges_of, modal_stroke, strokes_within
+from scanclean.elements import box
+from scanclean.labels import label
+from scanclean.morphology import dilate
+from scanclean.profiles import Lines
+from scanclean.runs import RunSet
+from scanclean.units import Resolution
+
+__all__ = ["RuledLines", "rule_pixels"]
+
+Bools = NDArray[np.bool_]
+Bytes = NDArray[np.uint8]
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+_INK = 0.1  # residual density of a stroke
+_SIGMAS = 3.2
+_PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a density
+_FRINGE_PX = 1.0  # beside a line, still judged by its profile
+_STEPS = 100.0  # of density in a byte
+_SPECK_MM2, _CROSSING_MM2 = 0.1, 0.5  # loose pieces that are a stroke's, at crossings of rules too
+_THIN = 1.8  # pixels: nothing drawn on purpose is thinner and stands alone
+
+# flags of pixels, by the direction of the rule they are on
+_ZONE = (1, 2)
+_DOUBTFUL = 4  # the column may hold a stroke
+_SHAPED = (8, 16)  # shape decides
+_KEPT = (32, 64)  # and finds a stroke
+_RIM = 128  # beside a line that shape decides
+
+
+@dataclass(frozen=True, eq=False)
+class RuledLines:
+    """Measured lines of one direction, and what of them is rule.
+
+    Parameters
+    ----------
+    lines : Lines
+    vertical : bool
+    live : (N,) bool array
+        Columns of rules.
+    by_shape : (T,) bool array
+        Rules on which tone cannot tell a stroke.
+    """
+
+    lines: Lines
+    vertical: bool
+    live: Bools
+    by_shape: Bools
+
+    def turned(self, page: NDArray[np.generic]) -> NDArray[np.generic]:
+        """A view of the page in which the lines run along the rows."""
+        return page.T if self.vertical else page
+
+
+def rule_pixels(
+    ink: RunSet,
+    ratio: Bytes | None,
+    noise: float,
+    ruled: list[RuledLines],
+    resolution: Resolution,
+) -> RunSet:
+    """The part of the ink that is rule and nothing else.
+
+    Parameters
+    ----------
+    ink : RunSet
+    ratio : (H, W) uint8 array or None
+        Page over paper, 255 = paper; None if there is no tone.
+    noise : float
+        Standard deviation of the ratio on paper.
+    ruled : list of RuledLines
+    resolution : Resolution
+
+    Returns
+    -------
+    RunSet
+    """
+    flags = np.zeros(ink.shape, np.uint8)
+    predicted = np.zeros(ink.shape, np.uint8)  # density of the rules, in steps
+    if ratio is not None:
+        for part in ruled:
+            _lay_density(part, part.turned(predicted), part.turned(flags))
+    if any(part.by_shape.any() for part in ruled):
+        _lay_shape(ruled, ink, flags)
+
+    zone = np.flatnonzero(flags)
+    flag = flags.ravel()[zone]
+    is_stroke = np.ones(zone.size, bool)
+    if ratio is not None:
+        is_stroke = _is_darker(ratio.ravel()[zone], predicted.ravel()[zone], flag, noise)
+    shaped = flag & (_SHAPED[0] | _SHAPED[1])
+    # at a crossing of two rules a stroke has to be one in both directions
+    found = (flag & (_KEPT[0] | _KEPT[1])) >> 2
+    is_stroke = np.where(shaped > 0, found == shaped, is_stroke)
+
+    on_rules = _points(ink.shape, zone) & ink
+    strokes = _points(ink.shape, zone[is_stroke]) & ink
+    both = (flag & (_ZONE[0] | _SHAPED[0]) > 0) & (flag & (_ZONE[1] | _SHAPED[1]) > 0)
+    crossings = _points(ink.shape, zone[both])
+    return on_rules - (strokes - _loose(strokes, ink - on_rules, crossings, resolution))
+
+
+def _is_darker(ratio: Bytes, predicted: Bytes, flag: Bytes, noise: float) -> Bools:
+    """Which pixels are darker than their rules by more than noise explains.
+
+    The noise of a density grows with the density: a table by steps of it serves all pixels.
+    """
+    rule = np.arange(256) / _STEPS
+    margin = np.maximum(_INK, _SIGMAS * _PER_RATIO * noise * 10 ** np.minimum(rule, 1.2))
+    darkest = 255 * 10.0 ** -(rule + margin)
+    darkest_sure = 255 * 10.0 ** -(rule + 1.5 * margin)
+    return ratio < np.where(flag & _DOUBTFUL, darkest[predicted], darkest_sure[predicted])
+
+
+def _lay_density(part: RuledLines, predicted: Bytes, flags: Bytes) -> None:
+    """Enter the density of lines, in their live columns, into the page's."""
+    lines, some = part.lines, np.flatnonzero(part.live)
+    row, column, density = lines.predicted(some, _FRINGE_PX)
+    i, j = np.nonzero((density >= 0) & (row >= 0) & (row < predicted.shape[0]))
+    y, x = row[i, j], column[i]
+    step = np.minimum(_STEPS * density[i, j] + 0.5, 255).astype(np.uint8)
+    predicted[y, x] = np.maximum(predicted[y, x], step)
+    zone = _ZONE[part.vertical]
+    flags[y, x] |= np.where(lines.sure[some[i]], zone, zone | _DOUBTFUL).astype(np.uint8)
+
+
+def _lay_shape(ruled: list[RuledLines], ink: RunSet, flags: Bytes) -> None:
+    """Enter the zones of lines that shape decides, and the strokes found in them."""
+    page = ink.to_mask()
+    bands = [band for part in ruled if part.by_shape.any() for band in _bands(part, page)]
+    for band in bands:
+        band.enter(flags, band.half + 1, _RIM)
+        band.enter(flags, band.half, _SHAPED[band.part.vertical])
+    across = [
+        (flags & (_ZONE[d] | _SHAPED[d]) == 0) | (flags & (_ZONE[1 - d] | _SHAPED[1 - d]) > 0)
+        for d in (1, 0)
+    ]
+    off = flags & ~np.uint8(_RIM) == 0
+    stroke = modal_stroke(RunSet.from_mask(page & off))
+    for band in bands:
+        # rules of the other direction are no strokes
+        alone = page & across[band.part.vertical]
+        band.enter_strokes(flags, band.part.turned(alone), stroke)
+
+
+@dataclass(frozen=True, eq=False)
+class _Band:
+    """Lines of one thickness, straightened: the middle pixel in each column."""
+
+    part: RuledLines
+    half: int
+    row: Ints
+    column: Ints
+    live: Bools
+
+    def enter(self, flags: Bytes, half: int, flag: int, which: Bools | None = None) -> None:
+        """Set a flag on the pixels of the live columns, or on (2 half + 1, n) chosen ones."""
+        turned = self.part.turned(flags)
+        row = self.row + np.arange(-half, half + 1)[:, None]
+        chosen = (row >= 0) & (row < turned.shape[0]) & self.live
+        if which is not None:
+            chosen &= which
+        i, j = np.nonzero(chosen)
+        turned[row[i, j], self.column[j]] |= np.uint8(flag)
+
+    def enter_strokes(self, flags: Bytes, page: Bools, stroke: int) -> None:
+        """Find the strokes and flag them."""
+        _, kept = strokes_within(page, self.row, self.column, self.half, stroke)
+        self.enter(flags, self.half, _KEPT[self.part.vertical], kept)
+
+
+def _bands(part: RuledLines, page: Bools) -> list[_Band]:
+    lines = part.lines
+    low, high = edges_of(lines, np.asarray(part.turned(page)))
+    half = np.rint((high - low) / 2).astype(np.int64)
+    middle = np.rint(lines.centre + ((low + high) / 2)[lines.track]).astype(np.int64)
+    bands = []
+    for rows in np.unique(half[part.by_shape]):
+        mine = np.flatnonzero((part.by_shape & (half == rows))[lines.track])
+        band = _Band(part, int(rows), middle[mine], lines.column[mine], part.live[mine])
+        bands.append(band)
+    return bands
+
+
+def _points(shape: tuple[int, int], flat: Ints) -> RunSet:
+    """The set of pixels at flat positions y W + x, given in rising order."""
+    place = flat + flat // shape[1]  # a page of runs has one column more
+    begins = np.diff(place, prepend=-2) != 1
+    ends = np.append(begins[1:], True)[: place.size]
+    return RunSet(shape, np.stack((place[begins], place[ends] + 1), axis=1).ravel())
+
+
+def _loose(strokes: RunSet, ink: RunSet, crossings: RunSet, resolution: Resolution) -> RunSet:
+    """Residue that touches no ink beside the rules and is too small or too thin for a stroke."""
+    mm2 = resolution.x_mm * resolution.y_mm
+    pieces = label(strokes)
+    longest = np.maximum(pieces.box[:, 2] - pieces.box[:, 0], pieces.box[:, 3] - pieces.box[:, 1])
+    thin = pieces.area < _THIN * longest
+    doubtful = thin | (pieces.area < _CROSSING_MM2 * mm2)
+    pieces, thin = pieces.select(doubtful), thin[doubtful]
+    if pieces.n == 0:
+        return pieces.runs
+    around = dilate(pieces.runs, box(3, 3))
+    touched = pieces.touching(dilate(around & ink, box(3, 3)))
+    crossed = pieces.runs & crossings
+    owner = np.searchsorted(pieces.runs.bounds[0::2], crossed.bounds[0::2], side="right") - 1
+    at_crossing = np.bincount(pieces.run_label[owner], crossed.length, pieces.n)
+    small = (pieces.area < _SPECK_MM2 * mm2) | (2 * at_crossing > pieces.area)
+    return pieces.keep(~touched & (small | thin))
