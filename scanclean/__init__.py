@@ -1,7 +1,7 @@
 """Cleans scanned pages to bitonal ink, accounts for every pixel, finds glyphs and text lines.
 
-The names below are the library's front door; each is loaded when it is first used, so that importing
-the package costs nothing.
+The names below are the library's front door; each is loaded when it is first used, so that
+importing the package costs nothing.
 """
 
 from __future__ import annotations

@@ -17,6 +17,7 @@ from scanclean.holes import find_pinholes
 from scanclean.labels import Components, label
 from scanclean.ledger import Ledger
 from scanclean.pageio import Scan
+from scanclean.reading import Glyphs, TextLines, put_in_order
 from scanclean.recipe import Recipe
 from scanclean.ruling import Rule, find_rules
 from scanclean.runs import RunSet, complement, crop
@@ -43,41 +44,6 @@ _MOSTLY_INK = 0.6  # a bitonal page with more ink than this is a negative
 _LEAST_TURN = 0.03  # degrees; half a pixel at the ends of a line across A4 at 300 dpi
 _DENSE_SPECKS = 4.0  # a square centimetre: every second letter of small print has one beside it
 _MM2_PER_CM2 = 100.0
-
-
-@dataclass
-class Glyphs:
-    box: object
-    area: object
-    parts: object
-    holes: object
-    line: object
-    word: object
-    component_glyph: object
-
-
-@dataclass
-class TextLines:
-    box: object
-    baseline: object
-    x_height: object
-
-
-def put_in_order(c, parts, lines):  # PROVISIONAL until reading order lands
-    import numpy as np
-    g, n = parts.glyph, parts.n
-    first = np.full(n, 1 << 60); np.minimum.at(first, g, np.arange(c.n))
-    order = np.argsort(first); rank = np.empty(n, int); rank[order] = np.arange(n); g = rank[g]
-    box = np.full((n, 4), 1 << 60); box[:, 2:] = 0
-    for k in (0, 1): np.minimum.at(box[:, k], g, c.box[:, k])
-    for k in (2, 3): np.maximum.at(box[:, k], g, c.box[:, k])
-    line = np.full(n, -1); line[g] = parts.places.line
-    G = Glyphs(box, np.bincount(g, c.area, n).astype(int), np.bincount(g, minlength=n), np.bincount(g, c.holes, n).astype(int), line, line.copy(), g)
-    L = lines.n; lb = np.zeros((L, 4), int); bl = np.zeros((L, 2, 2))
-    for i in range(L):
-        b = box[line == i]
-        if len(b): lb[i] = [*b[:, :2].min(0), *b[:, 2:].max(0)]; bl[i] = [[lb[i, 0], lb[i, 3]], [lb[i, 2], lb[i, 3]]]
-    return G, TextLines(lb, bl, lines.x_height)
 
 
 @dataclass(frozen=True, eq=False)
@@ -245,14 +211,12 @@ def _find_ink(
             ink = complement(ink)
         nothing = RunSet.empty(ink.shape)
         return _Start(ink, nothing, None, None, bool(negative), _stroke_width(ink))
-    tone = measure_tone(
-        pixels, resolution=resolution, light_on_dark=recipe.threshold.light_on_dark
-    )
+    tone = measure_tone(pixels, resolution=resolution, light_on_dark=recipe.threshold.light_on_dark)
     found = threshold(pixels, tone, recipe.threshold, resolution)
     return _Start(
         ink=found.ink,
         shade=found.shade,
-        light_paper=~pixels if tone.light_on_dark else pixels,
+        light_paper=~grey if tone.light_on_dark else grey,
         tone=tone,
         light_on_dark=tone.light_on_dark,
         stroke_px=tone.stroke_px,
@@ -317,9 +281,7 @@ class _Books:
         return Ledger(self.thresholded, claims, self.ink - self.thresholded)
 
 
-def _add_steps(
-    books: _Books, steps: tuple[Step, ...], resolution: Resolution, after: str
-) -> None:
+def _add_steps(books: _Books, steps: tuple[Step, ...], resolution: Resolution, after: str) -> None:
     """The recipe's own steps that follow a stage."""
     for step in steps:
         if step.after == after:
