@@ -211,8 +211,9 @@ def _find_ink(
             ink = complement(ink)
         nothing = RunSet.empty(ink.shape)
         return _Start(ink, nothing, None, None, bool(negative), _stroke_width(ink))
-    tone = measure_tone(pixels, resolution=resolution, light_on_dark=recipe.threshold.light_on_dark)
-    found = threshold(pixels, tone, recipe.threshold, resolution)
+    grey = pixels.astype(np.uint8, copy=False)
+    tone = measure_tone(grey, resolution=resolution, light_on_dark=recipe.threshold.light_on_dark)
+    found = threshold(grey, tone, recipe.threshold, resolution)
     return _Start(
         ink=found.ink,
         shade=found.shade,
