@@ -129,7 +129,10 @@ class Batch:
         if jobs < 1:
             raise ValueError(f"jobs must be at least 1, got {jobs}")
         with _part_folder(self.output) as part:
-            run = _Run(self, part, RunLog(self.output) if self.recorded else None)
+            log = RunLog(self.output) if self.recorded else None
+            if log is not None:
+                log.begin()
+            run = _Run(self, part, log)
             try:
                 results = run_jobs(run.jobs(), processes=jobs, later=run.later, stop=stop)
                 with contextlib.closing(results):

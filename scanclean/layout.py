@@ -35,6 +35,7 @@ _LINES = {"box": (4,), "baseline": (2, 2), "x_height_px": ()}
 _GLYPHS = {"line": (), "word": (), "box": (4,), "area": (), "parts": (), "holes": ()}
 _RULES = {"direction": (), "box": (4,), "thickness_px": ()}
 _FLOATS = {"baseline", "x_height_px", "thickness_px"}
+_IDS = {"line", "word"}  # 0 is none: null in the file
 
 
 @dataclass(frozen=True)
@@ -82,8 +83,8 @@ class Layout:
     lines : Table
         ``box`` (L, 4) int, ``baseline`` (L, 2, 2) two points (x, y), ``x_height_px`` (L,).
     glyphs : Table
-        In reading order: ``line``, ``word`` (G,) ids, ``box`` (G, 4), ``area``, ``parts``,
-        ``holes`` (G,) int.
+        In reading order: ``line``, ``word`` (G,) ids, 0 for what stands in no text line and null
+        in the file; ``box`` (G, 4), ``area``, ``parts``, ``holes`` (G,) int.
     rules : Table
         ``direction`` (R,) str, ``box`` (R, 4) int, ``thickness_px`` (R,).
     """
@@ -219,15 +220,20 @@ def _table_json(table: Table) -> str:
     """A JSON array, a row a line."""
     size = len(next(iter(table.values()), ()))
     names = ["id", *table]
-    columns = [map(str, range(1, size + 1)), *(_cells(column) for column in table.values())]
+    columns = [
+        map(str, range(1, size + 1)),
+        *(_cells(name, column) for name, column in table.items()),
+    ]
     row = "    {" + ", ".join(f"{_dump(name)}: %s" for name in names) + "}"
     rows = [row % cells for cells in zip(*columns, strict=True)]
     return "[\n" + ",\n".join(rows) + "\n  ]" if rows else "[]"
 
 
-def _cells(column: NDArray[Any]) -> Iterator[str]:
+def _cells(name: str, column: NDArray[Any]) -> Iterator[str]:
     """The JSON of each entry of a column."""
     column = np.asarray(column)
+    if name in _IDS:
+        return (str(value) if value else "null" for value in column.tolist())
     if column.dtype.kind == "f":
         column = _rounded(column, _PLACES)
     if column.dtype.kind in "iu" and column.ndim == 1:
@@ -250,7 +256,8 @@ def _columns(rows: list[dict[str, Any]], known: Mapping[str, tuple[int, ...]]) -
     table = {}
     for name in names:
         number = float if name in _FLOATS else str if name == "direction" else None
-        values = np.asarray([row[name] for row in rows], number)
+        entries = [row[name] or 0 for row in rows] if name in _IDS else [row[name] for row in rows]
+        values = np.asarray(entries, number)
         if name in known:
             kind = number if number is not None else np.int64
             values = values.astype(kind).reshape(len(rows), *known[name])

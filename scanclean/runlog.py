@@ -148,6 +148,17 @@ class RunLog:
     ) -> None:
         self.close()
 
+    def begin(self) -> None:
+        """Make the file if there is none, so that there is one at any moment of the run.
+
+        Raises
+        ------
+        OutputError
+            If it cannot be written.
+        """
+        with writing(self._path), open(self._path, "ab"):
+            pass
+
     @property
     def files(self) -> set[str]:
         """All results that are recorded."""

@@ -29,7 +29,8 @@ from scanclean.cli import cli
 from scanclean.layout import layout_schema
 from scanclean.ledger import CLASSES, PALETTE
 
-FIXTURES = Path(__file__).parent.parent / "fixtures"
+ROOT = Path(__file__).parent.parent
+FIXTURES = ROOT / "fixtures"
 MAIN = "from scanclean.cli import main; main()"
 PART = ".scanclean-part"
 SUFFIXES = (".tif", ".ledger.png", ".layout.json")
@@ -65,6 +66,13 @@ def encoded(image: Image.Image, kind="PNG", **options) -> bytes:
     buffer = io.BytesIO()
     image.save(buffer, kind, **options)
     return buffer.getvalue()
+
+
+@pytest.fixture(scope="module", autouse=True)
+def _package_found_from_everywhere():
+    with pytest.MonkeyPatch.context() as patched:
+        patched.setenv("PYTHONPATH", str(ROOT), prepend=os.pathsep)
+        yield
 
 
 @pytest.fixture

@@ -247,8 +247,8 @@ def layouts(draw):
             "x_height_px": floats(n_lines, elements=above_zero),
         },
         glyphs={
-            "line": ints(n_glyphs, least=1),
-            "word": ints(n_glyphs, least=1),
+            "line": ints(n_glyphs),  # 0: in no line
+            "word": ints(n_glyphs),
             "box": ints(n_glyphs, 4),
             "area": ints(n_glyphs, least=1),
             "parts": ints(n_glyphs, least=1),
@@ -286,6 +286,16 @@ def test_a_layout_comes_back_as_it_was_and_is_valid(layout):
             assert table[name].dtype.kind == was[name].dtype.kind
             assert np.array_equal(table[name], was[name])
     assert again.to_json() == text
+
+
+def test_a_glyph_that_stands_in_no_line_has_null_for_it():
+    layout = agreed()
+    layout.glyphs["line"][0] = layout.glyphs["word"][0] = 0
+    data = json.loads(layout.to_json())
+    valid(data)
+    assert data["glyphs"][0]["line"] is None
+    assert data["glyphs"][0]["word"] is None
+    assert Layout.from_json(layout.to_json()).glyphs["line"].tolist() == [0]
 
 
 def test_names_of_any_bytes_come_back():
