@@ -15,14 +15,14 @@ PACKAGE = Path(scanclean.__file__).parent
 FACADE = {"__init__", "__main__"}
 
 ORDER = """
-errors units settings blocks smoothing
+errors units settings
 runs elements labels morphology
 files pagewrite pageio
-density contrast relaxation outlines threshold
-upright skew edges
-profiles tracks ruling
-textmeasure neighbours baselines columns textlines specks glyphs shade holes
-ledger layout steps recipe clean
+blocks smoothing density contrast outlines shade relaxation threshold
+skew edges
+tracks profiles crossings removal frames ruling
+textmeasure upright neighbours baselines columns textlines places slant specks glyphs reading
+holes ledger layout steps recipe clean
 sources runlog work pool batch
 score cli
 """.split()  # noqa: SIM905 (a row a layer)
