@@ -8,6 +8,7 @@ the scan, the cleaned page, the ledger and the difference from the truth, for lo
 from __future__ import annotations
 
 import math
+import re
 import time
 from collections.abc import Iterable
 from dataclasses import dataclass, fields
@@ -230,7 +231,7 @@ def mean(rows: list[Figures]) -> Figures:
 
 def _save(folder: Path, page: DrawnPage, cleaned: CleanPage) -> None:
     folder.mkdir(parents=True, exist_ok=True)
-    stem = page.name.replace(",", "").replace(" ", "-")
+    stem = re.sub(r"[^a-z0-9]+", "-", page.name)
     scan = np.where(page.scan, 0, 255).astype(np.uint8) if page.scan.dtype == bool else page.scan
     ledger = Image.fromarray(cleaned.ledger.to_array(), "P")
     ledger.putpalette([level for colour in PALETTE for level in colour])

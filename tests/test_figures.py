@@ -1,12 +1,42 @@
 from __future__ import annotations
 
+import math
+from typing import NamedTuple
+
 import numpy as np
 import pytest
 from skimage.filters import threshold_otsu
 from skimage.measure import label, regionprops
 
 from fixtures.drawn import draw
-from tests.figures import Outcome, difference, hulls, measure
+from tests.figures import Outcome, difference, figures_of, hulls, measure
+
+
+class Promise(NamedTuple):
+    """What cleaning promises: at most so many per cent; at least so good an F1."""
+
+    ink_lost: float = 1.5
+    rule_left: float = 0.1
+    lost_at_rules: float = 1.0
+    hurt: float = 0.3
+    marks_lost: float = 0.0
+    boxes: float = 0.98
+    lines: float = 1.0
+    words: float = 0.95
+
+
+PROMISED = {
+    "ledger": Promise(words=0.85),
+    "ledger colour rules": Promise(boxes=0.97, words=0.85),
+    "typed": Promise(boxes=0.985),
+    "serif": Promise(words=0.96),
+    "serif skew 9": Promise(words=0.92),
+    "serif borders": Promise(words=0.94),
+    "two columns": Promise(),
+    "small print, accents": Promise(words=0.97),
+    # joined-up letters have no box of their own
+    "cursive on rules": Promise(marks_lost=1.0, boxes=math.nan, lines=0.95, words=0.88),
+}
 
 
 def perfect(page) -> Outcome:
@@ -69,3 +99,21 @@ def test_hulls_of_words():
 def test_the_difference_picture_marks_what_was_lost(ledger):
     picture = difference(ledger, np.zeros_like(ledger.ink))
     assert (picture[ledger.ink] == (213, 94, 0)).all()
+
+
+@pytest.mark.parametrize("variant", PROMISED)
+def test_promised_figures(variant):
+    figures = figures_of(variant)
+    losses = figures.losses
+    promise = PROMISED[variant]
+    assert 100 * (1 - losses.ink_kept) <= promise.ink_lost
+    assert 100 * losses.rule_left <= promise.rule_left
+    assert 100 * losses.ink_lost_at_rules <= promise.lost_at_rules
+    assert 100 * figures.hurt_share <= promise.hurt
+    assert 100 * figures.marks_lost_share <= promise.marks_lost
+    assert math.isnan(promise.boxes) or figures.boxes >= promise.boxes
+    assert figures.lines >= promise.lines
+    assert figures.words >= promise.words
+    # sure dirt goes; what stands like a mark beside a letter may stay
+    assert losses.specks_left <= 0.12 * losses.specks
+    assert losses.ink_added <= 0.001
