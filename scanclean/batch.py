@@ -25,17 +25,16 @@ from scanclean import __version__
 from scanclean.errors import CallError, OutputError, PageError, ScancleanError
 from scanclean.files import Written, file_sha256, one_line, shown, writing
 from scanclean.pageio import count_pages
-from scanclean.pool import Job, run_jobs
+from scanclean.pool import Job, Ready, run_jobs
 from scanclean.runlog import PageRecord, ResultFile, RunLog, recorded_results
 from scanclean.sources import Found, PageSelection, SourceFile, check_names, find_scans
-from scanclean.work import BindWork, PageTask, Work
+from scanclean.work import BINDINGS, BindWork, PageTask, Work
 
 __all__ = ["SCAN_SUFFIXES", "Batch", "Outcome", "plan_batch"]
 
 SCAN_SUFFIXES = (".png", ".tif", ".tiff", ".jpg", ".jpeg", ".jp2", ".j2k", ".jpx", ".webp")
 """What files in folders end with to be taken as scans."""
 
-_BOUND = ".bound"  # what a bound file adds to the name of its source
 _PART = ".scanclean-part"  # in the output folder while a run goes
 _MOVING = "moving"  # in a page's part folder from the first move on
 
@@ -222,10 +221,9 @@ def _check_results(batch: Batch, found: Found) -> None:
         for suffix in batch.work.suffixes
     ]
     if batch.bind is not None:
-        (suffix,) = BindWork(batch.bind, ()).suffixes
         for source in dict.fromkeys(task.source for task in batch.tasks):
-            name = source.name + _BOUND
-            results.append((source.path, name, name + suffix))
+            name = source.name + BINDINGS[batch.bind]
+            results.append((source.path, name, name))
     check_names(found, ((path, name) for path, _, name in results), output=batch.output)
     if batch.redo:
         return
@@ -244,11 +242,14 @@ def _check_results(batch: Batch, found: Found) -> None:
 # ---- a run
 
 
+_Step = Job[Outcome] | Ready[Outcome]
+
+
 class _Run:
     """The state of a run: the record, and what is still open of each source."""
 
     def __init__(self, batch: Batch, part: Path, log: RunLog | None) -> None:
-        self.later: deque[Job[Outcome]] = deque()
+        self.later: deque[_Step] = deque()
         self._batch, self._part, self._log = batch, part, log
         self._source_of = {task.name: task.source for task in batch.tasks}
         self._open: dict[SourceFile, dict[str, PageRecord | None]] = {}
@@ -256,18 +257,18 @@ class _Run:
             self._open.setdefault(task.source, {})[task.name] = None
         self._hashed = (Path(), "")
 
-    def jobs(self) -> Iterator[Job[Outcome]]:
+    def jobs(self) -> Iterator[_Step]:
         """What is to do, in the order of the call; what needs no work as its ready outcome."""
         work = self._batch.work
         for task, error in self._batch.unreadable:
-            yield _Known(_failed(task, work, error))
+            yield Ready(_failed(task, work, error))
         for task in self._batch.tasks:
             if task.n_pages > 1 or self._earlier(task) is not None:
                 # here once for all pages of a source, or to see whether there is anything to do
                 try:
                     task = replace(task, sha256=self._hash(task.source.path))
                 except PageError as error:
-                    yield _Known(_failed(task, work, str(error)))
+                    yield Ready(_failed(task, work, str(error)))
                     continue
             yield self._job(task, work)
 
@@ -279,10 +280,10 @@ class _Run:
     def _earlier(self, task: PageTask) -> PageRecord | None:
         return None if self._log is None else self._log.records.get(task.name)
 
-    def _job(self, task: PageTask, work: Work) -> Job[Outcome]:
+    def _job(self, task: PageTask, work: Work) -> _Step:
         earlier = self._earlier(task)
         if earlier is not None and not self._batch.redo and self._is_current(task, work, earlier):
-            return _Known(Outcome(task.name, task.shown, "skipped", earlier))
+            return Ready(Outcome(task.name, task.shown, "skipped", earlier))
         return _PageJob(task, work, self._batch.output, _folder_of(self._part, task.name))
 
     def _is_current(self, task: PageTask, work: Work, earlier: PageRecord) -> bool:
@@ -328,35 +329,22 @@ class _Run:
             self._log.put(record)
         return record
 
-    def _bind_job(self, source: SourceFile, kind: str, pages: list[PageRecord]) -> Job[Outcome]:
+    def _bind_job(self, source: SourceFile, kind: str, pages: list[PageRecord]) -> _Step:
         files = {output.file: output.sha256 for page in pages for output in page.outputs}
         names = [page.name + ".tif" for page in pages]
         work = BindWork(
             kind, tuple((self._batch.output / name, files.get(name, "")) for name in names)
         )
-        task = PageTask(source, 0, len(pages), source.name + _BOUND, pages[0].sha256 or "")
+        task = PageTask(source, 0, len(pages), source.name + BINDINGS[kind], pages[0].sha256 or "")
         if any(page.status == "failed" for page in pages):
             error = f"{task.shown}: not bound, because not all of its pages could be cleaned"
-            return _Known(_failed(task, work, error))
+            return Ready(_failed(task, work, error))
         return self._job(task, work)
 
     def close(self) -> None:
         """Put the record in order."""
         if self._log is not None:
             self._log.close()
-
-
-@dataclass(frozen=True)
-class _Known:
-    """A job that needs no doing."""
-
-    outcome: Outcome
-
-    def __call__(self) -> Outcome:
-        return self.outcome
-
-    def lost(self) -> Outcome:
-        return self.outcome
 
 
 @dataclass(frozen=True)

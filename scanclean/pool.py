@@ -17,10 +17,11 @@ from collections import deque
 from collections.abc import Generator, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
+from dataclasses import dataclass
 from multiprocessing import connection
 from typing import Generic, Protocol, TypeVar
 
-__all__ = ["Job", "run_jobs"]
+__all__ = ["Job", "Ready", "run_jobs"]
 
 T = TypeVar("T")
 T_co = TypeVar("T_co", covariant=True)
@@ -39,37 +40,47 @@ class Job(Protocol[T_co]):
         """The result of a job whose process died, twice."""
 
 
+@dataclass(frozen=True)
+class Ready(Generic[T]):
+    """A result that takes no work, among jobs; no process is asked for it."""
+
+    result: T
+
+
 def run_jobs(
-    ready: Iterator[Job[T]],
+    ready: Iterator[Job[T] | Ready[T]],
     *,
     processes: int,
-    later: deque[Job[T]] | None = None,
+    later: deque[Job[T] | Ready[T]] | None = None,
     stop: threading.Event | None = None,
 ) -> Generator[T, None, None]:
     """Do jobs and yield their results as they come.
 
     Parameters
     ----------
-    ready : iterator of Job
+    ready : iterator of Job and Ready
         Taken one at a time, no more than one beyond what is being done.
     processes : int
         1 does everything in the calling process.
-    later : deque of Job, optional
-        Jobs that the caller adds when it has seen a result; they go first.
+    later : deque of Job and Ready, optional
+        What the caller adds when it has seen a result; it goes first.
     stop : threading.Event, optional
         Once set, no further job is begun; those in hand are finished.
     """
     source = _Source(ready, later, stop)
     if processes == 1:
         while (job := source.next()) is not None:
-            yield job()
+            yield job.result if isinstance(job, Ready) else job()
         return
     with _Pool[T](processes) as pool:
         in_hand: dict[Future[T], Job[T]] = {}
         while True:
             # one job waits in the queue, so that no process waits for the caller
             while len(in_hand) <= processes and (job := source.next()) is not None:
-                in_hand[pool.submit(job)] = job
+                if isinstance(job, Ready):
+                    yield job.result
+                else:
+                    in_hand[pool.submit(job)] = job
             if not in_hand:
                 return
             done, _ = wait(in_hand, return_when=FIRST_COMPLETED)
@@ -78,10 +89,10 @@ def run_jobs(
                 done, _ = wait(in_hand)
                 pool.restart()
             # in the order in which they were begun
-            for future, job in [item for item in in_hand.items() if item[0] in done]:
-                del in_hand[future]
+            for future in [future for future in in_hand if future in done]:
+                begun = in_hand.pop(future)
                 if isinstance(future.exception(), BrokenProcessPool):
-                    yield _alone(job)
+                    yield _alone(begun)
                 else:
                     yield future.result()
 
@@ -99,13 +110,13 @@ class _Source(Generic[T]):
 
     def __init__(
         self,
-        ready: Iterator[Job[T]],
-        later: deque[Job[T]] | None,
+        ready: Iterator[Job[T] | Ready[T]],
+        later: deque[Job[T] | Ready[T]] | None,
         stop: threading.Event | None,
     ) -> None:
         self._ready, self._later, self._stop = ready, later, stop
 
-    def next(self) -> Job[T] | None:
+    def next(self) -> Job[T] | Ready[T] | None:
         if self._stop is not None and self._stop.is_set():
             return None
         return self._later.popleft() if self._later else next(self._ready, None)

@@ -26,6 +26,7 @@ from scanclean.sources import SourceFile
 from scanclean.units import Resolution
 
 __all__ = [
+    "BINDINGS",
     "LEDGER_SUFFIXES",
     "BindWork",
     "CleanWork",
@@ -39,7 +40,10 @@ __all__ = [
 LEDGER_SUFFIXES = (".ledger.png",)
 """What ledgers in folders end with."""
 
-_BINDERS = {"tiff": (".tif", bind_tiff), "pdf": (".pdf", bind_pdf)}
+BINDINGS = {"tiff": ".bound.tif", "pdf": ".bound.pdf"}
+"""What a bound file adds to the name of its source."""
+
+_BINDERS = {"tiff": bind_tiff, "pdf": bind_pdf}
 
 
 @dataclass(frozen=True)
@@ -218,14 +222,13 @@ class BindWork:
 
     @property
     def suffixes(self) -> tuple[str, ...]:
-        """The bound file."""
-        return (_BINDERS[self.kind][0],)
+        """The task's name is that of the bound file."""
+        return ("",)
 
     def do(self, task: PageTask, folder: Path) -> Done:
         """Read the cleaned pages one by one and write them into one file."""
-        suffix, bind = _BINDERS[self.kind]
         pages = bitonal_pages(path for path, _ in self.pages)
-        return Done({suffix: bind(folder / (task.leaf + suffix), pages)})
+        return Done({"": _BINDERS[self.kind](folder / task.leaf, pages)})
 
 
 def page_layout(page: CleanPage, source: Source) -> Layout:

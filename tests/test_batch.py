@@ -490,9 +490,10 @@ def test_without_a_record_nothing_is_resumed(here):
 @pytest.mark.parametrize("jobs", [1, 2])
 def test_the_pages_of_each_scan_are_bound(here, kind, suffix, jobs):
     outcomes = run(bind=kind, jobs=jobs)
-    bound = {name: s for name, s in statuses(outcomes).items() if name.endswith(".bound")}
-    assert bound == dict.fromkeys(["a.bound", "b.bound", "book.bound", "sub/a.bound"], "done")
-    line = next(line for line in log() if line["name"] == "book.bound")
+    bound = {name: s for name, s in statuses(outcomes).items() if ".bound" in name}
+    names = [name + ".bound" + suffix for name in ("a", "b", "book", "sub/a")]
+    assert bound == dict.fromkeys(names, "done")
+    line = next(line for line in log() if line["name"] == "book.bound" + suffix)
     assert line["page"] == 0
     (output,) = line["outputs"]
     data = (Path("out") / output["file"]).read_bytes()
@@ -512,7 +513,7 @@ def test_the_pages_of_each_scan_are_bound(here, kind, suffix, jobs):
 def test_a_bound_file_is_made_anew_when_a_page_changed_or_others_are_chosen(here):
     def book(**options):
         found = statuses(run(["scans/book.tif"], bind="tiff", **options))
-        return found["book.bound"], read_page("out/book.bound.tif").n_pages
+        return found["book.bound.tif"], read_page("out/book.bound.tif").n_pages
 
     assert book() == ("done", 3)
     assert book() == ("skipped", 3)
@@ -526,14 +527,21 @@ def test_a_bound_file_is_made_anew_when_a_page_changed_or_others_are_chosen(here
     assert book(work=Copy(level=90)) == ("done", 3)
 
 
+def test_a_scan_may_be_bound_both_ways(here):
+    run(["scans/book.tif"], bind="tiff")
+    assert statuses(run(["scans/book.tif"], bind="pdf"))["book.bound.pdf"] == "done"
+    assert {"book.bound.tif", "book.bound.pdf"} <= set(results())
+    assert statuses(run(["scans/book.tif"], bind="tiff"))["book.bound.tif"] == "skipped"
+
+
 def test_a_scan_with_a_failed_page_is_not_bound(here):
     outcomes = run(bind="tiff", work=Copy(trouble=(("book.p0002", "page"),)))
-    (failed,) = (each for each in outcomes if each.name == "book.bound")
+    (failed,) = (each for each in outcomes if each.name == "book.bound.tif")
     assert (
         failed.error == "scans/book.tif: not bound, because not all of its pages could be cleaned"
     )
     assert "book.bound.tif" not in results()
-    assert statuses(run(bind="tiff"))["book.bound"] == "done"
+    assert statuses(run(bind="tiff"))["book.bound.tif"] == "done"
 
 
 def test_a_batch_is_a_plain_value(here):

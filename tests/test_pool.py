@@ -10,7 +10,7 @@ from collections import deque
 
 import pytest
 
-from scanclean.pool import run_jobs
+from scanclean.pool import Ready, run_jobs
 from tests.works import Number
 
 
@@ -48,6 +48,21 @@ def test_jobs_added_on_the_way_go_first(processes):
             later.append(Number(100))
     assert sorted(seen) == [*range(1, 9), 100]
     assert seen.index(100) - seen.index(1) <= 1 + 2 * processes
+
+
+@pytest.mark.parametrize("processes", [1, 2])
+def test_what_takes_no_work_is_handed_on_without_a_process(processes):
+    known = object()  # could not be sent to another process and come back as the same
+    found = list(run_jobs(iter([Ready(known), Ready(known)]), processes=processes))
+    assert found == [known, known]
+    later: deque = deque()
+    seen = []
+    for result in run_jobs(iter([Number(1), Number(2)]), processes=processes, later=later):
+        seen.append(result)
+        if len(seen) == 1:
+            later.append(Ready(known))
+    assert seen.count(known) == 1
+    assert len(seen) == 3
 
 
 @pytest.mark.parametrize("processes", [1, 2])
