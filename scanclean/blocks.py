@@ -122,6 +122,28 @@ class Surface:
                 values += wide[above]
             yield slice(top, bottom), values
 
+    def rows(self, rows: slice) -> NDArray[np.float32]:
+        """The surface at every pixel of some rows.
+
+        Parameters
+        ----------
+        rows : slice
+            Of the page, any step.
+
+        Returns
+        -------
+        float32, shape (rows, W)
+        """
+        at = np.arange(*rows.indices(self.shape[0]), dtype=np.float32)
+        at = np.clip((at + np.float32(0.5)) / self.size - np.float32(0.5), 0, len(self.grid) - 1)
+        above = at.astype(np.intp)
+        upper = self._wide[above]
+        values = self._wide[np.minimum(above + 1, len(self.grid) - 1)]
+        values -= upper
+        values *= (at - above.astype(np.float32))[:, None]
+        values += upper
+        return values
+
 
 def sliding_max(values: NDArray[np.uint8], size: int) -> NDArray[np.uint8]:
     """Largest value in a square window: grey dilation by a box.

@@ -12,10 +12,10 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from PIL import Image
+from PIL import Image, ImageFilter
 
 from scanclean.blocks import Surface, block_moments, sliding_max, sliding_min
-from scanclean.units import Resolution
+from scanclean.units import MM_PER_INCH, Resolution
 
 __all__ = ["BLOCK", "DENSITY", "Tone", "measure_tone", "otsu_level", "run_length"]
 
@@ -28,12 +28,19 @@ DENSITY: NDArray[np.float32] = -np.log10(
 """(256,) float32: optical density of each value of `Tone.ratio`; black counts as 1.2 % of paper."""
 
 _COARSE_PER_MM = 3.0  # the paper is looked for at about 75 dpi: between lines it still shows
+_A4_LONG_SIDE = 297.0  # mm
+_LEAST_DPI = 72.0  # no page that can be read has less
 _CLOSING_MM = 5.0  # strokes narrower than this are closed over when the paper is looked for
 _PAPER_MM = 3.0  # the paper level is smoothed over this
 _BLACK = 0.25  # what is darker than this share of the page's bright paper is no paper
 _SIGMAS = 5.0  # ink stands out of the paper's noise by more than this
 _FEWEST_PAIRS = 12  # neighbours that stand out: a dot of 4 x 4 pixels
 _STROKE_DEFAULT = 4.0  # of a page without ink
+_FAINT = (0.15, 0.5)  # shares of the ink's darkness between which a pixel is neither
+_STRONG = 0.6  # a block that rises by this share of the ink's darkness has ink in it
+_SOFT_RISE = 0.12  # one that rises by less than this, or by less noises than that, has nothing
+_SOFT_SIGMAS = 8.0
+_SOFT = 0.6  # share of the ink's sharpness under which a block is soft
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,6 +67,14 @@ class Tone:
         0 on a blank page.
     blank : bool
         Nothing stands out of the noise of the paper: no ink. An all-black page is blank too.
+    sharpness : float
+        Of the ink's outlines: the largest step between neighbours as a share of the whole rise
+        from paper to ink, the median over blocks with ink.
+    faint : float
+        Pixels well between paper and ink, for those that blurred outlines of strokes would have:
+        about 0.4 on a clean page, 1 and more where something faint stands beside the ink.
+    soft : float
+        Blocks that are fainter and softer than the ink and apart from it, for each block with ink.
     mean, square : float32, shape (ceil(H / BLOCK), ceil(W / BLOCK))
         Mean of the darkness ``1 - page / paper`` and of its square, in blocks.
     """
@@ -72,6 +87,9 @@ class Tone:
     paper_level: float
     ink_darkness: float
     blank: bool
+    sharpness: float
+    faint: float
+    soft: float
     mean: NDArray[np.float32]
     square: NDArray[np.float32]
 
@@ -89,8 +107,8 @@ def measure_tone(
     grey : uint8, shape (H, W)
         0 black, 255 white.
     resolution : Resolution, optional
-        300 dpi is assumed where it is not given; only the scale of the paper's unevenness
-        depends on it.
+        Sets the scale on which paper may be uneven. Where it is not given, or finer than that of
+        an A4 page of this size, the A4 page's counts: pictures of scraps are seldom lit evenly.
     light_on_dark : bool, optional
         Whether light ink stands on dark paper; found out when not given.
 
@@ -107,22 +125,28 @@ def measure_tone(
         raise ValueError(
             f"a grey page must be a (H, W) uint8 array, got {grey.dtype} of shape {grey.shape}"
         )
-    resolution = resolution or Resolution(300.0, 300.0)
-    step = min(16, max(1, round(resolution.mm / _COARSE_PER_MM)))
-    coarse = np.asarray(Image.fromarray(grey).reduce(step))
+    per_mm = max(max(grey.shape) / _A4_LONG_SIDE, _LEAST_DPI / MM_PER_INCH)
+    if resolution is not None:
+        per_mm = min(per_mm, resolution.mm)
+    step = min(16, max(1, round(per_mm / _COARSE_PER_MM)))
+    coarse = _reduced(grey, step)
     if light_on_dark is None:
         light_on_dark = _is_light_on_dark(coarse)
     if light_on_dark:
         grey = ~grey
-        coarse = np.asarray(Image.fromarray(grey).reduce(step))  # rounds as the negative would
-    paper = _paper_surface(coarse, step, grey.shape, per_mm=resolution.mm / step)
+        coarse = _reduced(grey, step)  # not ~coarse: it rounds the other way
+    paper = _paper_surface(coarse, step, grey.shape, per_mm=per_mm / step)
     mean, square, noise = _darkness_moments(grey, paper)
     ratio = _ratio(grey, paper)
 
     histogram = np.array(Image.fromarray(ratio).histogram())
     ink_darkness = _ink_darkness(ratio, histogram, noise)
     blank = ink_darkness == 0.0
-    stroke = _STROKE_DEFAULT if blank else _stroke_width(ratio, otsu_level(histogram))
+    stroke, sharpness, faint, soft = _STROKE_DEFAULT, 1.0, 0.0, 0.0
+    if not blank:
+        stroke = _stroke_width(ratio, otsu_level(histogram))
+        sharpness, soft = _outline_measures(ratio, ink_darkness, noise)
+        faint = _faint_share(histogram, ink_darkness, noise) * stroke * sharpness
     return Tone(
         ratio=ratio,
         noise=noise,
@@ -132,6 +156,9 @@ def measure_tone(
         paper_level=float(np.median(paper.grid)),
         ink_darkness=ink_darkness,
         blank=blank,
+        sharpness=sharpness,
+        faint=faint,
+        soft=soft,
         mean=mean,
         square=square,
     )
@@ -184,6 +211,12 @@ def _quantile(values: NDArray[np.uint8], share: float) -> int:
     """Smallest level that at least a share of the pixels do not exceed."""
     count = np.cumsum(Image.fromarray(values).histogram())
     return int(np.searchsorted(count, share * count[-1]))
+
+
+def _reduced(grey: NDArray[np.uint8], step: int) -> NDArray[np.uint8]:
+    """Means of ``step`` x ``step`` pixels; of 3 x 3 such cells where they alone are noisy."""
+    reduced = Image.fromarray(grey).reduce(step)
+    return np.asarray(reduced if step > 2 else reduced.filter(ImageFilter.BoxBlur(1)))
 
 
 def _is_light_on_dark(coarse: NDArray[np.uint8]) -> bool:
@@ -307,3 +340,56 @@ def _stroke_width(ratio: NDArray[np.uint8], level: int) -> float:
         lengths = lengths[lengths > 1]
         medians.append(float(np.median(lengths)) if lengths.size else _STROKE_DEFAULT)
     return float(np.clip(min(medians), 2.0, 20.0))
+
+
+def _faint_share(histogram: NDArray[np.integer], ink_darkness: float, noise: float) -> float:
+    """Half the pixels well between paper and ink, for each of ink."""
+    darkness = (1.0 - np.arange(256) / 255.0) / ink_darkness
+    ink = darkness >= _FAINT[1]
+    between = (darkness > max(_FAINT[0], _SIGMAS * noise / ink_darkness)) & ~ink
+    return float(histogram[between].sum() / max(1, 2 * histogram[ink].sum()))
+
+
+def _outline_measures(
+    ratio: NDArray[np.uint8], ink_darkness: float, noise: float
+) -> tuple[float, float]:
+    """Sharpness of the ink's outlines, and the share of soft blocks; see `Tone`.
+
+    Measured in blocks of `BLOCK` pixels on bands three blocks high that are spread over the page;
+    the middle blocks of a band have all their neighbours in it.
+    """
+    n_rows, n_columns = (n // BLOCK for n in ratio.shape)
+    if n_rows < 3 or n_columns < 3:
+        return 1.0, 0.0
+    spacing = min(max(3, n_rows // 16), 12)
+    n_bands = n_rows // spacing
+    bands = ratio[: n_bands * spacing * BLOCK, : n_columns * BLOCK]
+    bands = bands.reshape(n_bands, spacing * BLOCK, -1)[:, : 3 * BLOCK]
+    bands = bands.reshape(n_bands, 3, BLOCK, -1)
+
+    def largest(columns: NDArray[np.uint8]) -> NDArray[np.float32]:
+        """Largest of the columns of each block, as a share of the paper."""
+        block: NDArray[np.uint8] = columns.reshape(n_bands, 3, n_columns, BLOCK).max(axis=-1)
+        return np.multiply(block, np.float32(1 / 255), dtype=np.float32)
+
+    rise = largest(bands.max(axis=2)) + largest(255 - bands.min(axis=2)) - 1
+    down = largest(_distance(bands[:, :, 1:], bands[:, :, :-1]).max(axis=2))
+    across = np.zeros((n_bands, 3, n_columns * BLOCK), np.uint8)
+    across[..., :-1] = _distance(bands[..., 1:], bands[..., :-1]).max(axis=2)
+    across[..., BLOCK - 1 :: BLOCK] = 0  # from one block into the next
+    step = np.maximum(down, largest(across)) / np.maximum(rise, np.float32(1 / 255))
+
+    strong = rise > _STRONG * ink_darkness
+    if not strong.any():
+        return 1.0, 0.0
+    sharpness = float(np.median(step[strong]))
+    beside = np.pad(strong, ((0, 0), (0, 0), (1, 1)))
+    near = (beside[:, :, :-2] | strong | beside[:, :, 2:]).any(axis=1)
+    faint = rise[:, 1] > max(_SOFT_SIGMAS * noise, _SOFT_RISE * ink_darkness)
+    soft = faint & ~near & (step[:, 1] < _SOFT * sharpness)
+    return sharpness, np.count_nonzero(soft) / max(1, int(np.count_nonzero(strong[:, 1])))
+
+
+def _distance(a: NDArray[np.uint8], b: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    distance: NDArray[np.uint8] = np.maximum(a, b) - np.minimum(a, b)
+    return distance

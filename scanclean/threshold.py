@@ -1,4 +1,4 @@
-"""Grey page to ink: the page's own adaptive threshold and the published ones by their names."""
+"""Grey page to ink: the threshold that adapts to the page, and published ones by their names."""
 
 from __future__ import annotations
 
@@ -9,12 +9,25 @@ from numpy.typing import NDArray
 from PIL import Image
 
 from scanclean.blocks import Surface, block_moments
+from scanclean.contrast import measure_contrast
 from scanclean.density import BLOCK, Tone, otsu_level
+from scanclean.outlines import find_outlines
+from scanclean.relaxation import relaxed_ink
 from scanclean.runs import RunSet
 from scanclean.settings import setting
+from scanclean.shade import find_shade
 from scanclean.units import Length, Resolution
 
-__all__ = ["METHODS", "ThresholdSettings", "Thresholded", "threshold"]
+__all__ = [
+    "METHODS",
+    "ThresholdSettings",
+    "Thresholded",
+    "clean_ink",
+    "darker",
+    "is_clean",
+    "local_level",
+    "threshold",
+]
 
 METHODS = ("adaptive", "sauvola", "niblack", "wolf", "otsu", "fixed")
 
@@ -22,7 +35,19 @@ _DEFAULT_K = {"sauvola": 0.2, "niblack": 0.2, "wolf": 0.5}
 _WINDOW_STROKES = 10.0  # the automatic window spans this many stroke widths
 _BLOCKS_A_WINDOW = 5
 _LEAST_BLOCK = 3  # pixels; smaller blocks cost more than they are worth
-_FAST_WINDOW = 9  # blocks over which the ink's darkness is averaged
+
+_CLEAN_WINDOW = 9  # blocks over which the ink's darkness is averaged
+_PAGE_SAY = 0.02  # share of ink in the window at which the page's ink has half the say
+_BORDER = 0.6  # share of the ink's mean darkness; blur takes a sixth off the mean
+_LEAST_DARKNESS = 0.08
+_NOISES = 5.0
+
+_THIN_PX = 2.5  # strokes whose outlines run into each other: nothing to go by for relaxation
+_NOISY = 0.035  # noise of the paper as a share of the ink's darkness
+_DARK = 0.6  # darkness under which ink has faded
+_CRISP = 0.7  # sharpness that makes up for it
+_FAINT = 0.7
+_SOFT = 0.02
 
 
 @dataclass(frozen=True)
@@ -114,7 +139,9 @@ def threshold(
         grey = ~grey
     method = settings.method
     if method == "adaptive":
-        mask = halfway(tone)
+        if not is_clean(tone):
+            return _thresholded_by_outlines(grey, tone.stroke_px)
+        mask = clean_ink(tone)
     elif method == "otsu":
         mask = grey <= otsu_level(np.array(Image.fromarray(grey).histogram()))
     elif method == "fixed":
@@ -205,12 +232,28 @@ def local_level(
     return Surface(level.astype(np.float32), size, grey.shape)
 
 
-def halfway(tone: Tone) -> NDArray[np.bool_]:
+def is_clean(tone: Tone) -> bool:
+    """Whether the page needs no more than a threshold that follows paper and ink.
+
+    It does where its paper is noisy, its ink faded or blurred, where faint things stand beside
+    the ink (show-through, pencil, hairlines) or soft ones apart from it (stains).
+    """
+    if tone.stroke_px < _THIN_PX:
+        return True
+    return (
+        tone.noise <= _NOISY * tone.ink_darkness
+        and (tone.ink_darkness >= _DARK or tone.sharpness >= _CRISP)
+        and tone.faint <= _FAINT
+        and tone.soft <= _SOFT
+    )
+
+
+def clean_ink(tone: Tone) -> NDArray[np.bool_]:
     """Ink of a clean page: darker than halfway between the paper and the ink near by.
 
-    With f the darkness of a pixel, the sum of f squared over the sum of f is the mean darkness
-    weighted by itself: that of the ink, however little of the window the ink covers. Where
-    there is next to no ink it falls back on the page's.
+    With f the darkness of a pixel, ``sum f**2 / sum f`` is the mean darkness weighted by itself:
+    that of the ink, however little of the window the ink covers. Where there is next to no ink
+    it falls back on the page's.
 
     Returns
     -------
@@ -218,14 +261,22 @@ def halfway(tone: Tone) -> NDArray[np.bool_]:
     """
     from scipy.ndimage import uniform_filter
 
-    noise2 = tone.noise**2
-    mean = uniform_filter(np.maximum(tone.mean, 0.0), _FAST_WINDOW, mode="reflect")
-    square = uniform_filter(np.maximum(tone.square - noise2, 0.0), _FAST_WINDOW, mode="reflect")
-    lean = np.float32(0.02)
-    ink = (square + lean * tone.ink_darkness**2) / (mean + lean * tone.ink_darkness)
-    needed = np.maximum(0.5 * ink, max(5.0 * tone.noise, 0.08))
+    mean = uniform_filter(np.maximum(tone.mean, 0.0), _CLEAN_WINDOW, mode="reflect")
+    square = np.maximum(tone.square - tone.noise**2, 0.0)
+    square = uniform_filter(square, _CLEAN_WINDOW, mode="reflect")
+    page = _PAGE_SAY * tone.ink_darkness
+    darkness = (square + page * tone.ink_darkness) / (mean + page)
+    needed = np.maximum(_BORDER * darkness, max(_NOISES * tone.noise, _LEAST_DARKNESS))
     level = (255.0 * (1.0 - needed)).astype(np.float32)
     return darker(tone.ratio, Surface(level, BLOCK, tone.ratio.shape))
+
+
+def _thresholded_by_outlines(grey: NDArray[np.uint8], stroke_px: float) -> Thresholded:
+    """Ink and shade of a page that is not clean."""
+    contrast = measure_contrast(grey, stroke_px)
+    outlines = find_outlines(contrast)
+    ink = RunSet.from_mask(relaxed_ink(contrast, outlines))
+    return Thresholded(ink, find_shade(ink, contrast, outlines))
 
 
 def darker(grey: NDArray[np.uint8], level: Surface) -> NDArray[np.bool_]:
