@@ -62,6 +62,12 @@ _HOME = {
     "to_toml": "recipe",
     "CleanPage": "clean",
     "clean_page": "clean",
+    "PageSelection": "sources",
+    "CleanWork": "work",
+    "RestoreWork": "work",
+    "Batch": "batch",
+    "Outcome": "batch",
+    "plan_batch": "batch",
 }
 
 __all__ = ["__version__", *_HOME]

@@ -169,8 +169,7 @@ class CleanWork:
         notes: tuple[str, ...] = ()
         if page.dpi_estimated:
             notes = (
-                f"no resolution in the file and no --dpi: {page.resolution.x:g} dpi taken, "
-                "estimated from the size of the text",
+                f"no resolution in the file and no --dpi: {page.resolution.x:g} dpi estimated",
             )
         return Done(written, page.flags, notes)
 

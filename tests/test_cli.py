@@ -299,7 +299,11 @@ def test_a_resolution_that_is_not_stated_is_given_or_estimated(here):
         assert image.info["dpi"] == (204, 98)
     done = scanclean("clean", "scan.png", "-o", "estimated")
     assert done.returncode == 0
-    assert re.search(r"^scanclean: scan.png: no resolution in the file .* \d+ dpi taken", done.err)
+    assert re.search(
+        r"^scanclean: scan.png: no resolution in the file and no --dpi: [0-9.]+ dpi estimated$",
+        done.err,
+        re.MULTILINE,
+    )
     assert "dpi-estimated" in check_page("estimated", "scan")["flags"]
     assert log("estimated")[0]["flags"].count("dpi-estimated") == 1
     note().save("scan.png", dpi=(300, 300))  # what the file states goes first
