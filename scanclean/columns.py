@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from scanclean.baselines import Baselines
 from scanclean.neighbours import best_of_both, chains, repeat_range
 
-__all__ = ["Gaps", "Occupied", "corridors", "parting_columns", "stacks"]
+__all__ = ["Gaps", "Occupied", "Pieces", "corridors", "parting_columns", "stacks"]
 
 
 Floats = NDArray[np.float64]
@@ -27,6 +27,7 @@ Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
 _LONG_LINE = 14.0  # of the letters' height: cells of a table are shorter as a rule
+_RUNNING_LINE = 20.0  # and these are surely no cells
 _REACH = 12.0  # how far above and below a gap its corridor is followed, in letters' heights
 _LOOK = 24  # pieces further down the page that are tried as the next below
 
@@ -44,7 +45,7 @@ class Gaps:
     y : (K,) float array
         Baseline there.
     offset : (K,) float array
-        How far apart the two pieces' baselines are.
+        How far the second piece's baseline is below the first's.
     height : (K,) float array
         Height of the larger letters.
     """
@@ -139,11 +140,38 @@ def corridors(gaps: Gaps, occupied: Occupied) -> Bools:
     return joined
 
 
-def stacks(lines: Baselines, left: Floats, right: Floats) -> Ints:
+@dataclass(frozen=True, eq=False)
+class Pieces:
+    """Pieces of lines; columns of length S.
+
+    Parameters
+    ----------
+    baselines : Baselines
+    left, right : (S,) float array
+        Ends of the letters.
+    tabular : (S,) bool array
+        Joined across a corridor, as the cells of a table's row.
+    """
+
+    baselines: Baselines
+    left: Floats
+    right: Floats
+    tabular: Bools
+
+    def are_long(self, chosen: Ints, length: float) -> bool:
+        """Whether the chosen pieces are running text of so many heights of its letters."""
+        if np.count_nonzero(self.tabular[chosen]) * 2 > chosen.size:
+            return False
+        usual = np.median((self.right - self.left)[chosen])
+        return bool(usual >= length * np.median(self.baselines.height[chosen]))
+
+
+def stacks(pieces: Pieces) -> Ints:
     """(S,) the stack that each piece stands in: pieces under one another, each the next below.
 
     A heading over two columns is stacked on one of them at most.
     """
+    lines, left, right = pieces.baselines, pieces.left, pieces.right
     n = lines.n
     middle = (left + right) / 2
     order = np.argsort(lines.at(np.arange(n), middle), kind="stable")
@@ -164,37 +192,58 @@ def stacks(lines: Baselines, left: Floats, right: Floats) -> Ints:
     return chains(i[chosen], j[chosen], n)[1]
 
 
-def parting_columns(
-    gaps: Gaps, corridor: Bools, stack: Ints, lines: Baselines, left: Floats, right: Floats
-) -> Bools:
+def parting_columns(gaps: Gaps, corridor: Bools, stack: Ints, pieces: Pieces) -> Bools:
     """(K,) which gaps part two columns of text, so that no line runs across them.
 
     Two stacks are columns if there is a clear gutter between them and either both have long lines
     or their rows are not level. Gaps that no stacks decide follow the others of their corridor.
+
+    Parameters
+    ----------
+    gaps : Gaps
+    corridor : (K, K) bool array
+        Of `corridors`.
+    stack : (S,) int array
+        Of `stacks`.
+    pieces : Pieces
     """
-    parted = np.zeros(gaps.before.size, bool)
-    decided = np.zeros(gaps.before.size, bool)
-    level = lines.at(np.arange(lines.n), (left + right) / 2)
+    parted, decided = np.zeros((2, gaps.before.size), bool)
     before, after = stack[gaps.before], stack[gaps.after]
+    goes_on = np.zeros((2, stack.size), bool)  # has a neighbour behind it, before it
+    goes_on[0, gaps.before] = goes_on[1, gaps.after] = True
     for a, b in np.unique(np.stack((before, after), axis=1), axis=0):
-        if a == b:
-            continue
-        ours, theirs = np.flatnonzero(stack == a), np.flatnonzero(stack == b)
-        height = float(np.median(lines.height[np.concatenate((ours, theirs))]))
-        low = max(level[ours].min(), level[theirs].min()) - height
-        high = min(level[ours].max(), level[theirs].max()) + height
-        ours = ours[(level[ours] > low) & (level[ours] < high)]
-        theirs = theirs[(level[theirs] > low) & (level[theirs] < high)]
-        rows = min(ours.size, theirs.size)
-        if rows < 3:
-            continue
         between = (before == a) & (after == b)
-        gutter = np.quantile(left[theirs], 0.1) - np.quantile(right[ours], 0.9)
-        offset = float(np.median(gaps.offset[between] / gaps.height[between]))
-        is_level = between.sum() >= 0.7 * rows and offset <= 0.2
-        length = min(np.median((right - left)[ours]), np.median((right - left)[theirs]))
-        decided |= between
-        if gutter > 0.5 * height and (length >= _LONG_LINE * height or not is_level):
-            parted |= between
+        verdict = None if a == b else _are_columns(gaps.keep(between), a, b, stack, goes_on, pieces)
+        if verdict is not None:
+            decided |= between
+            parted |= between & verdict
     votes = corridor @ (parted.astype(np.int64) - (decided & ~parted))
     return parted | (~decided & (votes > 0))
+
+
+def _are_columns(
+    gaps: Gaps, a: int, b: int, stack: Ints, goes_on: Bools, pieces: Pieces
+) -> bool | None:
+    """Whether two stacks with these gaps between them are columns; None if too few rows tell."""
+    lines, left, right = pieces.baselines, pieces.left, pieces.right
+    whole = [np.flatnonzero(stack == s) for s in (a, b)]
+    level = [lines.at(s, (left[s] + right[s]) / 2) for s in whole]
+    height = float(np.median(lines.height[np.concatenate(whole)]))
+    top = max(y.min() for y in level) - height
+    bottom = min(y.max() for y in level) + height
+    ours, theirs = (s[(y > top) & (y < bottom)] for s, y in zip(whole, level, strict=True))
+    # two rows of a note tell, beside running text; two cells beside two cells do not
+    running = any(s.size >= 5 and pieces.are_long(s, _RUNNING_LINE) for s in whole)
+    if min(ours.size, theirs.size) < (2 if running else 3):
+        return None
+    gutter = np.quantile(left[theirs], 0.1) - np.quantile(right[ours], 0.9)
+    if gutter <= 0.5 * height:
+        return False
+    if pieces.are_long(ours, _LONG_LINE) and pieces.are_long(theirs, _LONG_LINE):
+        return True
+    # rows that have no neighbour on the other side, though they could
+    alone = min(np.count_nonzero(~goes_on[0, ours]), np.count_nonzero(~goes_on[1, theirs]))
+    offset = gaps.offset / gaps.height
+    drift = float(np.median(offset))  # on a curled page all rows are out of step alike
+    in_step = np.count_nonzero(np.abs(offset - drift) <= 0.2)
+    return bool(in_step < 0.7 * (offset.size + alone) or abs(drift) > 0.5)

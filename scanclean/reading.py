@@ -18,7 +18,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from scanclean.columns import stacks
+from scanclean.columns import Pieces, stacks
 from scanclean.glyphs import Parts
 from scanclean.labels import Components
 from scanclean.neighbours import grouped_median, keyed_best, weighted_median
@@ -175,7 +175,7 @@ def _blocks(lines: LineSet, base: Floats) -> Ints:
     A stack is cut where its width changes and another column stands beside the narrower side: a
     heading over two columns belongs to neither.
     """
-    stack = stacks(lines.baselines, lines.left, lines.right)
+    stack = stacks(Pieces(lines.baselines, lines.left, lines.right, np.zeros(lines.n, bool)))
     order = np.lexsort((base, stack))
     upper, lower = order[:-1], order[1:]
     chained = stack[upper] == stack[lower]

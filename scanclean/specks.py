@@ -15,11 +15,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scanclean.clutter import is_hair, is_lump
 from scanclean.labels import Components
 from scanclean.neighbours import keyed_neighbours
 from scanclean.places import Places, find_places
 from scanclean.settings import setting
-from scanclean.textlines import LineSet, is_lump
+from scanclean.textlines import LineSet
 from scanclean.textmeasure import Spread, TextMeasures, measure_spread
 from scanclean.units import MM_PER_INCH, Length, Resolution
 from scanclean.upright import Shapes, place
@@ -33,7 +34,6 @@ Bools = NDArray[np.bool_]
 _LEAST_OF_DOT = 0.4  # a mark has at least so much of the area of the page's usual dot
 _DOT_OF_STROKE = 0.8  # area of a dot where none can be measured, of the squared stroke width
 _DOTS_TO_MEASURE = 8
-_HAIR_OF_STROKE = 0.4  # thinner than this share of the stroke width is no stroke
 _MOST_OF_MARK = 8.0  # dots; what is larger is writing of some kind
 _SMALLEST_LETTER = 0.8  # x-heights
 _USUAL_DPI = 300.0
@@ -99,7 +99,8 @@ def find_specks(
         letter = _SMALLEST_LETTER * measures.x_height_px
         speck |= lone & (side < letter)
         speck |= lone & is_lump(components, shapes, measures.stroke_px) & (side < 2.5 * letter)
-        speck |= _is_hair(components, shapes, measures.stroke_px) & ~places.body
+        long = side > 2.2 * x_height
+        speck |= is_hair(components, shapes, measures.stroke_px) & (~places.body | long)
     return speck
 
 
@@ -191,10 +192,3 @@ def _has_mate(places: Places, asked: Ints, among: Bools, area: Floats, *, over: 
     if over:
         found &= (places.top[asked] < 1.4) & (places.bottom[asked] > -0.6)
     return found
-
-
-def _is_hair(components: Components, shapes: Shapes, stroke: float) -> Bools:
-    """(C,) which components are thinner than any stroke all along."""
-    length = np.hypot(shapes.width, shapes.height)
-    thick = components.area * shapes.frame.aspect / np.maximum(length, 1)
-    return (thick < _HAIR_OF_STROKE * stroke) & (length > 4 * stroke)

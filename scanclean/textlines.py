@@ -23,7 +23,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.baselines import Baselines, Slices, cut_slices, fit_baselines, line_x_heights
-from scanclean.columns import Gaps, Occupied, corridors, parting_columns, stacks
+from scanclean.clutter import is_hair, is_lump
+from scanclean.columns import Gaps, Occupied, Pieces, corridors, parting_columns, stacks
 from scanclean.labels import Components
 from scanclean.neighbours import (
     beside,
@@ -37,7 +38,7 @@ from scanclean.textmeasure import Spread, TextMeasures, measure_spread, measure_
 from scanclean.units import Resolution
 from scanclean.upright import Frame, Shapes, place
 
-__all__ = ["LineSet", "find_lines", "is_lump"]
+__all__ = ["LineSet", "find_lines"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -49,6 +50,7 @@ _LARGEST_BODY = 8.0
 _RIGHT_SCALE = (0.75, 1.35)  # lines found with a measure further out are looked for again
 _BAND = 0.2
 _UNLIKE = 2.0  # letters of one line differ less in height, capital and bracket from lower case
+_UNLIKE_BESIDE = 2.7  # long f and swung capitals to the next letter
 _WORD_SPACE = 1.6  # gaps up to this are never asked whether they part columns
 _SURE_GAP = 2.6  # and up to this, if no corridor runs there
 _LARGEST_GAP = 14.0  # that one row alone can bridge
@@ -182,8 +184,10 @@ def find_lines(
     spread = spread or measure_spread(components)
     slope = float(np.tan(np.radians(skew_degrees)))
     frame = Frame.at(slope, resolution)
-    free = np.ones(components.n, bool)
     found = _no_lines(frame)
+    shapes = place(components, spread, frame)
+    stroke = measures.stroke_px
+    free = ~(is_lump(components, shapes, stroke) | is_hair(components, shapes, stroke))
     for _ in range(_SIZES):
         if measures.letters < (_LETTERS_OF_A_SIZE if found.n else 1):
             break
@@ -192,22 +196,6 @@ def find_lines(
         free &= found.assign(place(components, spread, found.frame)) < 0
         measures = measure_text(components, resolution, spread=spread, among=free)
     return found
-
-
-def is_lump(components: Components, shapes: Shapes, stroke: float) -> Bools:
-    """(C,) which components are solid lumps: one stretch of ink in a row, thicker than a stroke."""
-    box = components.box
-    height = box[:, 3] - box[:, 1]
-    thick = np.minimum(
-        components.area / np.maximum(box[:, 2] - box[:, 0], 1), components.area / height
-    )
-    filled = components.area >= 0.5 * height * (box[:, 2] - box[:, 0])
-    return (
-        filled
-        & (components.n_runs <= 1.25 * height)
-        & (components.holes == 0)
-        & (thick >= 1.6 * stroke)
-    )
 
 
 def _no_lines(frame: Frame) -> LineSet:
@@ -236,6 +224,7 @@ def _lines_of_one_size(
 ) -> LineSet:
     """Lines of the free components whose letters are about as large as measured."""
     frame, x_height = known.frame, measures.x_height_px
+    plain = components.n_runs < 1.25 * (components.box[:, 3] - components.box[:, 1])
     for attempt in range(2):
         for _ in range(3):
             shapes = place(components, spread, frame)
@@ -250,8 +239,8 @@ def _lines_of_one_size(
         chosen = np.zeros(components.n, bool)
         chosen[letters] = True
         slices = cut_slices(components, shapes, chosen, step=1.2 * x_height)
-        pieces = _Pieces(shapes, slices, letters, n, piece, x_height)
-        lines = pieces.to_lines(is_lump(components, shapes, measures.stroke_px)[letters])
+        pieces = _Joining(shapes, slices, letters, n, piece, x_height, plain)
+        lines = pieces.to_lines()
         if lines.n == 0 or attempt:
             break
         on_lines = weighted_median(lines.x_height, lines.baselines.size)
@@ -296,7 +285,7 @@ def _slope_of_pieces(shapes: Shapes, letters: Ints, n: int, piece: Ints) -> floa
     return weighted_median(xy[some] / xx[some], np.sqrt(xx[some]))
 
 
-class _Pieces:
+class _Joining:
     """Pieces of lines on their way to whole ones.
 
     Parameters
@@ -312,14 +301,25 @@ class _Pieces:
         The piece of each letter.
     x_height : float
         About that of the page.
+    plain : (C,) bool array
+        Components with one stretch of ink in most rows, as the strokes of marks have.
     """
 
     def __init__(
-        self, shapes: Shapes, slices: Slices, letters: Ints, n: int, piece: Ints, x_height: float
+        self,
+        shapes: Shapes,
+        slices: Slices,
+        letters: Ints,
+        n: int,
+        piece: Ints,
+        x_height: float,
+        plain: Bools,
     ) -> None:
         self.shapes, self.slices, self.x_height = shapes, slices, x_height
         self.letters, self.n, self.piece = letters, n, piece
+        self.tabular = np.zeros(n, bool)
         self.level, self.core = shapes.y[letters], shapes.core[letters]
+        self.plain = plain[letters]
         self.occupied = Occupied(
             shapes.left[letters],
             shapes.right[letters],
@@ -328,17 +328,10 @@ class _Pieces:
             x_height / 2,
         )
 
-    def to_lines(self, lump: Bools) -> LineSet:
-        """Join what belongs together and drop what is no line of its own.
-
-        Parameters
-        ----------
-        lump : (N,) bool array
-            Letters that are solid lumps; a piece that is mostly lumps is none.
-        """
+    def to_lines(self) -> LineSet:
+        """Join what belongs together and drop what is no line of its own."""
         for _ in range(2):
             self._bridge(across_columns=False)
-        self._drop(np.bincount(self.piece, lump, self.n) > 0.6 * self._size)
         if self.n:
             self._absorb()
             self._drop(self._guests())
@@ -360,11 +353,13 @@ class _Pieces:
         kept = ~chosen[self.piece]
         self.letters, self.piece = self.letters[kept], number[self.piece[kept]]
         self.level, self.core = self.level[kept], self.core[kept]
+        self.plain, self.tabular = self.plain[kept], self.tabular[~chosen]
         self.n = int(self.n - chosen.sum())
 
     def _join(self, i: Ints, j: Ints) -> None:
         self.n, joined = chains(i, j, self.n)
         self.piece = joined[self.piece]
+        self.tabular = np.bincount(joined, self.tabular, self.n) > 0
 
     def _baselines(self) -> tuple[Baselines, Slices, Ints]:
         number = np.full(self.shapes.x.size, -1, np.int64)
@@ -394,22 +389,23 @@ class _Pieces:
         are long enough to be told from cells of a table.
         """
         lines, _, _ = self._baselines()
-        left, right = self._ends()
-        gaps = self._gaps(lines, left, right)
+        pieces = Pieces(lines, *self._ends(), self.tabular)
+        gaps = self._gaps(pieces, across_columns=across_columns)
         corridor = corridors(gaps, self.occupied)
         rows = corridor.sum(axis=1)
         if across_columns:
             bridged = (gaps.width < _LARGEST_GAP * gaps.height) | (rows >= 3)
-            stack = stacks(lines, left, right)
-            bridged &= ~parting_columns(gaps, corridor, stack, lines, left, right)
+            bridged &= ~parting_columns(gaps, corridor, stacks(pieces), pieces)
+            cells = bridged & (gaps.width >= _SURE_GAP * gaps.height)
+            self.tabular[gaps.before[cells]] = self.tabular[gaps.after[cells]] = True
         else:
             bridged = (gaps.width < _SURE_GAP * gaps.height) & (rows < 3)
         self._join(gaps.before[bridged], gaps.after[bridged])
         return bool(bridged.any())
 
-    def _gaps(self, lines: Baselines, left: Floats, right: Floats) -> Gaps:
+    def _gaps(self, pieces: Pieces, *, across_columns: bool) -> Gaps:
         """Gaps between pieces that would make one line of both."""
-        n = self.n
+        n, lines = self.n, pieces.baselines
         # Pieces are ordered by the centres of their first and last letters: in slanted writing
         # the boxes of neighbours overlap.
         first, last = np.full(n, np.inf), np.full(n, -np.inf)
@@ -430,12 +426,16 @@ class _Pieces:
         high = np.maximum(lines.height[i], lines.height[j])
         shared = np.minimum(base_i, base_j)
         shared = shared - np.maximum(base_i - lines.height[i], base_j - lines.height[j])
-        width = left[j] - right[i]
-        fits = (shared >= 0.6 * low) & (high <= _UNLIKE * low) & (width <= _LARGEST_TAB * high)
+        width = pieces.left[j] - pieces.right[i]
+        # over a wide gap the rows of a curled page come out of step
+        least = np.where(across_columns & (width > 3 * high), 0.35, 0.6)
+        # a tall letter close by is of the line; one at a distance is of another type
+        unlike = np.where(width < _WORD_SPACE * low, _UNLIKE_BESIDE, _UNLIKE)
+        fits = (shared >= least * low) & (high <= unlike * low) & (width <= _LARGEST_TAB * high)
         cost = np.maximum(width, 0) / high + 2 * np.maximum(1 - shared / low, 0)
         cost += 0.5 * np.log(high / low)
-        base, offset = (base_i + base_j) / 2, np.abs(base_i - base_j)
-        gaps = Gaps(i, j, right[i], left[j], base, offset, high).keep(fits)
+        base, offset = (base_i + base_j) / 2, base_j - base_i
+        gaps = Gaps(i, j, pieces.right[i], pieces.left[j], base, offset, high).keep(fits)
         return gaps.keep(best_of_both(gaps.before, gaps.after, cost[fits]))
 
     def _absorb(self) -> None:
@@ -467,6 +467,8 @@ class _Pieces:
         lines, size, mine = self._lines(), self._size, self.piece
         x, y, high = self.shapes.middle[self.letters], self.level, self.core
         guest = np.zeros(x.size, bool)
+        # three and more letters with some structure are writing, however small beside the host
+        marks = ((size <= 2) | (np.bincount(mine, self.plain, self.n) > 0.5 * size))[mine]
         for line in lines.near(x, y):
             host = np.maximum(line, 0)
             x_height = lines.x_height[host]
@@ -475,7 +477,7 @@ class _Pieces:
             inside &= (half < 2.5) & lines.reaches(host, x)
             few = size[mine] <= 4
             crossing = few & (level + half > 0.1) & (level - half < 0.9)
-            small = (half < 0.4) & (level > -1.0) & (level < 2.8)
+            small = marks & (half < 0.4) & (level > -1.0) & (level < 2.8)
             tall = few & (half < 0.6) & (level > -0.9) & (level < 2.2)
             guest |= inside & (crossing | small | tall)
         return np.bincount(mine, guest, self.n) > 0.5 * size

@@ -34,6 +34,7 @@ _USUAL_DPI = (72, 96, 100, 150, 200, 240, 300, 400, 600, 1200)
 _LEAST_LETTER_MM = 0.6  # half the x-height of 8 pt type, under that of 6 pt
 _LEAST_LETTER_PX = 4.0  # no letter can be told by fewer rows
 _MOST_LETTER_MM = 25.0  # letters of posters; beyond it stand pictures and frames
+_BAR = 0.25  # what an upright bar counts among letters
 _BINS_PER_OCTAVE = 12
 
 
@@ -134,12 +135,13 @@ def measure_text(
         return TextMeasures(0.0, 0.0)
     spread = spread or measure_spread(components)
     size = np.minimum(spread.core(0.0), components.box[:, 3] - components.box[:, 1])
-    letters = _letter_like(components, size, resolution)
+    weight = _letter_like(components, size, resolution)
     if among is not None:
-        letters &= among
+        weight = np.where(among, weight, 0.0)
+    letters = weight > 0
     if not letters.any():
         return TextMeasures(0.0, 0.0)
-    x_height = _mode(size[letters], weights=size[letters])
+    x_height = _mode(size[letters], weights=weight[letters])
     near = letters & (size > 0.5 * x_height) & (size < 3 * x_height)
     lengths = components.runs.length[near[components.run_label]]
     lengths = lengths[lengths < 3 * x_height]  # bars along the text say nothing of its strokes
@@ -168,8 +170,8 @@ def estimate_dpi(x_height_px: float) -> float:
     return float(min(_USUAL_DPI, key=lambda dpi: abs(math.log(dpi / exact))))
 
 
-def _letter_like(components: Components, size: Floats, resolution: Resolution | None) -> Bools:
-    """(C,) which components have a letter's size and more structure than a blob."""
+def _letter_like(components: Components, size: Floats, resolution: Resolution | None) -> Floats:
+    """(C,) how far components have a letter's size and more structure than a blob, 0 to 1."""
     least, most = _LEAST_LETTER_PX, math.inf
     if resolution is not None:
         per_mm = resolution.y / MM_PER_INCH
@@ -178,8 +180,10 @@ def _letter_like(components: Components, size: Floats, resolution: Resolution | 
     box = components.box
     width, height = box[:, 2] - box[:, 0], box[:, 3] - box[:, 1]
     several_strokes = components.n_runs >= 1.25 * height
+    # an l or 1, but also a bar of a chart or a tick
     upright = (height >= 2 * width) & (height >= 2 * least)
-    return (size >= least) & (size <= most) & (several_strokes | upright)
+    weight = np.where(several_strokes, 1.0, np.where(upright, _BAR, 0.0))
+    return np.where((size >= least) & (size <= most), weight, 0.0)
 
 
 def _mode(values: Floats, *, weights: Floats) -> float:
