@@ -70,7 +70,8 @@ def join_parts(
     spread = spread or measure_spread(components)
     shapes = place(components, spread, lines.frame)
     places = find_places(lines, shapes)
-    places = upright_type(places, line_slants(components, lines, places.line))
+    slants = line_slants(components, lines, places.line)
+    places = upright_type(places, slants, components, lines)
     holes = components.holes
     marks, hosts = _marks_and_letters(places)
     hosted = np.zeros(components.n, bool)
@@ -92,7 +93,7 @@ def join_parts(
     return Parts(places, glyph, n)
 
 
-def upright_type(places: Places, slants: Floats) -> Places:
+def upright_type(places: Places, slants: Floats, components: Components, lines: LineSet) -> Places:
     """The places with slanted type sheared upright about the baseline, line by line.
 
     Parameters
@@ -100,13 +101,33 @@ def upright_type(places: Places, slants: Floats) -> Places:
     places : Places
     slants : (L,) float array
         Of `slant.line_slants`.
+    components : Components
+    lines : LineSet
     """
-    if slants.size == 0:
+    leaning = (places.line >= 0) & (np.append(slants, 0.0)[places.line] != 0)
+    if not leaning.any():
         return places
-    slant = np.where(places.line >= 0, slants[places.line], 0.0)
-    middle = places.middle - slant * (places.top + places.bottom) / 2
-    width = np.maximum(places.width - np.abs(slant) * places.height, 0.3 * places.width)
-    return replace(places, left=middle - width / 2, right=middle + width / 2)
+    runs, label = components.runs, components.run_label
+    mine = np.flatnonzero(leaning[label])
+    owner = label[mine]
+    # in pixels: x + slant * height over the baseline, which is level under one component
+    frame, line = lines.frame, places.line[owner]
+    x_height = lines.x_height[line]
+    y = runs.row[mine] + 0.5
+    ends = [frame.upright(x[mine].astype(np.float64), y) for x in (runs.start, runs.stop)]
+    _, top = frame.upright(
+        (components.box[:, 0] + components.box[:, 2]) / 2, components.box[:, 1].astype(np.float64)
+    )
+    base = (top + places.top * np.append(lines.x_height, 0.0)[places.line])[owner]
+    left, right = (x - slants[line] * (base - across) for x, across in ends)
+    bounds = np.full((2, places.line.size), np.inf)
+    np.minimum.at(bounds[0], owner, left / x_height)
+    np.minimum.at(bounds[1], owner, -right / x_height)
+    return replace(
+        places,
+        left=np.where(leaning, bounds[0], places.left),
+        right=np.where(leaning, -bounds[1], places.right),
+    )
 
 
 def _pairs(places: Places) -> tuple[Ints, Ints]:

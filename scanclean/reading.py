@@ -31,7 +31,10 @@ Ints = NDArray[np.int64]
 _GAPS = (-0.2, 1.8)  # looked at for the limit between letter and word spaces, in x-heights
 _LIMITS = (0.25, 0.9)
 _CLOSE = 0.3  # a line with wider letter spaces is letterspaced
+_ONE_SIZE = 1.12  # lines of x-heights so close, each to the next, are of one size of type
+_GAPS_OF_A_SIZE = 12
 _STEPS_FOR_PITCH = 15
+_NEXT_CELL = 1.3  # pitches; columns of a table need not be whole pitches apart
 _AGREED = 0.75  # mean cosine of the phases
 
 
@@ -272,28 +275,41 @@ def number_words(line: Ints, left: Floats, right: Floats, x_height: Floats) -> I
     span = float(right.max() - left.min()) + 1
     reached = np.maximum.accumulate(right + line * span) - line * span
     gap = (left[after + 1] - reached[after]) / x_height[line[after]]
-    parted = gap > _space_limits(gap, line[after], x_height.size)
+    parted = gap > _space_limits(gap, line[after], x_height)
     pitch = _pitches(line, left, right, after, x_height.size)
     cells = pitch[line[after]]
     fixed = cells > 0
-    parted[fixed] = (_step(left, right, after, cells)[fixed] / cells[fixed]) > 1.5
+    parted[fixed] = (_step(left, right, after, cells)[fixed] / cells[fixed]) > _NEXT_CELL
     first = np.ones(count, bool)
     first[after + 1] = parted
     word[:count] = np.cumsum(first) - 1
     return word
 
 
-def _space_limits(gap: Floats, line: Ints, n: int) -> Floats:
-    """For each gap the size from which it parts words: its line's largest jump near the page's."""
+def _space_limits(gap: Floats, line: Ints, x_height: Floats) -> Floats:
+    """For each gap the size from which it parts words.
+
+    The valley between letter and word spaces is looked for among all lines of one size of type;
+    each line then takes its own largest jump near it.
+    """
+    n = x_height.size
     usual = np.maximum(grouped_median(line, n, gap, 0.0), 0.0)
     loose = np.maximum(1.0, usual / _CLOSE)[line]  # letterspaced and hand-printed lines
     scaled = gap / loose
-    page = _valley(np.clip(scaled, *_GAPS))
-    limit = np.full(n, page)
+    order = np.argsort(x_height, kind="stable")
+    ranked = x_height[order]
+    size = np.empty(n, np.int64)
+    size[order] = np.cumsum(np.append(False, ranked[1:] > _ONE_SIZE * ranked[:-1]))
+    limit = np.full(n, _valley(scaled))
+    for k in range(int(size.max()) + 1):
+        mine = size[line] == k
+        if np.count_nonzero(mine) >= _GAPS_OF_A_SIZE:
+            limit[size == k] = _valley(scaled[mine])
     order = np.lexsort((scaled, line))
     ranked, of = scaled[order], line[order]
     jump, middle = np.diff(ranked), (ranked[1:] + ranked[:-1]) / 2
-    near = (of[1:] == of[:-1]) & (middle > 0.6 * page) & (middle < 1.6 * page)
+    near = of[1:] == of[:-1]
+    near &= (middle > 0.6 * limit[of[1:]]) & (middle < 1.6 * limit[of[1:]])
     best = keyed_best(of[1:][near], -jump[near])
     limit[of[1:][near][best]] = middle[near][best]
     return limit[line] * loose
@@ -301,7 +317,7 @@ def _space_limits(gap: Floats, line: Ints, n: int) -> Floats:
 
 def _valley(gap: Floats) -> float:
     """Otsu's limit between letter and word spaces."""
-    count, edges = np.histogram(gap, bins=64, range=_GAPS)
+    count, edges = np.histogram(np.clip(gap, *_GAPS), bins=64, range=_GAPS)
     middle = (edges[1:] + edges[:-1]) / 2
     below = np.cumsum(count)
     above = below[-1] - below

@@ -34,6 +34,7 @@ Bools = NDArray[np.bool_]
 _LEAST_OF_DOT = 0.4  # a mark has at least so much of the area of the page's usual dot
 _DOT_OF_STROKE = 0.8  # area of a dot where none can be measured, of the squared stroke width
 _DOTS_TO_MEASURE = 8
+_MOST_OF_DOT = 4.0  # a solid lump of more dots' area is no dot
 _MOST_OF_MARK = 8.0  # dots; what is larger is writing of some kind
 _SMALLEST_LETTER = 0.8  # x-heights
 _USUAL_DPI = 300.0
@@ -93,14 +94,16 @@ def find_specks(
     area = components.area * shapes.frame.aspect / x_height**2
     if settings.place:
         dot = _usual_dot(places, area, measures, lines)
-        asked = np.flatnonzero(small & (area < _MOST_OF_MARK * dot) )
+        lump = is_lump(components, shapes, measures)
+        lump &= np.maximum(shapes.width, shapes.height) < 2 * np.minimum(shapes.width, shapes.height)
+        blot = small & lump & (area > _MOST_OF_DOT * dot)
+        asked = np.flatnonzero(small & ~blot & (area < _MOST_OF_MARK * dot))
         speck[asked] |= ~_is_mark(places, asked, area, dot)
         lone = places.line < 0
         letter = _SMALLEST_LETTER * measures.x_height_px
-        speck |= lone & (side < letter)
-        speck |= lone & is_lump(components, shapes, measures.stroke_px) & (side < 2.5 * letter)
+        speck |= blot | (lone & (side < letter)) | (lone & lump & (side < 2.5 * letter))
         long = side > 2.2 * x_height
-        speck |= is_hair(components, shapes, measures.stroke_px) & (~places.body | long)
+        speck |= is_hair(components, shapes, measures) & (~places.body | long)
     return speck
 
 

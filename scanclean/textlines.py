@@ -186,8 +186,7 @@ def find_lines(
     frame = Frame.at(slope, resolution)
     found = _no_lines(frame)
     shapes = place(components, spread, frame)
-    stroke = measures.stroke_px
-    free = ~(is_lump(components, shapes, stroke) | is_hair(components, shapes, stroke))
+    free = ~(is_lump(components, shapes, measures) | is_hair(components, shapes, measures))
     for _ in range(_SIZES):
         if measures.letters < (_LETTERS_OF_A_SIZE if found.n else 1):
             break
