@@ -8,12 +8,11 @@ time, so that no floating-point page is ever held in memory.
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
-from PIL import Image
 
 __all__ = ["Surface", "block_moments", "sliding_max", "sliding_min"]
 
@@ -38,16 +37,27 @@ def block_moments(
         Mean of ``grey - centre`` and of ``(grey - centre) ** 2``.
     """
     height, width = grey.shape
-    shape = (-(-height // size), -(-width // size))
-    mean = np.empty(shape, np.float32)
-    square = np.empty(shape, np.float32)
-    step = max(1, 128 // size)  # block rows at a time: the strip stays in the processor's cache
-    for top in range(0, shape[0], step):
-        strip = grey[top * size : (top + step) * size].astype(np.float32)
+    whole = height // size
+    n_rows = -(-height // size)
+    # sums down the columns of a few rows of blocks at a time, which stay in the processor's cache
+    mean = np.empty((n_rows, width), np.float32)
+    square = np.empty((n_rows, width), np.float32)
+    step = max(1, 64 // size)
+    for first in [*range(0, whole, step), *range(whole, n_rows)]:
+        last = min(first + step, whole) if first < whole else n_rows
+        strip = grey[first * size : last * size].astype(np.float32)
         strip -= np.float32(centre)
-        mean[top : top + step] = Image.fromarray(strip).reduce(size)
-        strip *= strip
-        square[top : top + step] = Image.fromarray(strip).reduce(size)
+        strip = strip.reshape(last - first, -1, width)
+        strip.sum(axis=1, out=mean[first:last])
+        np.multiply(strip, strip, out=strip)
+        strip.sum(axis=1, out=square[first:last])
+    edges = np.arange(0, width, size)
+    rows = np.diff(np.append(np.arange(0, height, size), height))
+    share = (1.0 / np.outer(rows, np.diff(np.append(edges, width)))).astype(np.float32)
+    mean = np.add.reduceat(mean, edges, axis=1)
+    square = np.add.reduceat(square, edges, axis=1)
+    mean *= share
+    square *= share
     return mean, square
 
 
@@ -73,24 +83,38 @@ class Surface:
     grid: NDArray[np.float32]
     size: int
     shape: tuple[int, int]
-    _wide: NDArray[np.float32] = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
-        height, width = self.shape
-        if self.grid.shape != (-(-height // self.size), -(-width // self.size)):
+        expected = tuple(-(-side // self.size) for side in self.shape)
+        if self.grid.shape != expected:
             raise ValueError(
-                f"a page of {self.shape} in blocks of {self.size} px needs a grid of "
-                f"{(-(-height // self.size), -(-width // self.size))}, got {self.grid.shape}"
+                f"a page of {self.shape} in blocks of {self.size} px needs a grid of {expected}, "
+                f"got {self.grid.shape}"
             )
-        # along x once for all rows of the grid: this is small
-        at = (np.arange(width, dtype=np.float32) + np.float32(0.5)) / self.size - np.float32(0.5)
-        at = np.clip(at, 0, self.grid.shape[1] - 1)
-        left = np.minimum(at.astype(np.intp), max(0, self.grid.shape[1] - 2))
-        right = np.minimum(left + 1, self.grid.shape[1] - 1)
-        wide = self.grid[:, right] - self.grid[:, left]
-        wide *= at - left.astype(np.float32)
-        wide += self.grid[:, left]
-        object.__setattr__(self, "_wide", wide)
+
+    def rows(self, rows: slice) -> NDArray[np.float32]:
+        """The surface at every pixel of some rows.
+
+        Parameters
+        ----------
+        rows : slice
+            Of the page, any step upwards.
+
+        Returns
+        -------
+        float32, shape (rows, W)
+        """
+        wanted = np.arange(*rows.indices(self.shape[0]))
+        above, weight = _between(wanted, self.size, len(self.grid))
+        below = np.minimum(above + 1, len(self.grid) - 1)
+        first = above[0] if above.size else 0
+        wide = self._widened(self.grid[first : below[-1] + 1 if below.size else 0])
+        upper = wide[above - first]
+        values: NDArray[np.float32] = wide[below - first]
+        values -= upper
+        values *= weight[:, None]
+        values += upper
+        return values
 
     def strips(self) -> Iterator[tuple[slice, NDArray[np.float32]]]:
         """The surface at every pixel, a few rows at a time from the top.
@@ -102,47 +126,47 @@ class Surface:
             Valid until the next strip is asked for; may be written to.
         """
         height, width = self.shape
-        size = self.size
-        wide = self._wide
+        size, batch = self.size, 32
         buffer = np.empty((size, width), np.float32)
+        wide, first = self._widened(self.grid[:batch]), 0
         # between two rows of centres the values are a straight line in y
         edges = [0, *range(size // 2, height, size), height]
         for above, (top, bottom) in enumerate(pairwise(edges), start=-1):
             if top == bottom:
                 continue
+            upper, lower = max(above, 0), min(above + 1, len(self.grid) - 1)
+            if lower - first >= len(wide):
+                wide, first = self._widened(self.grid[upper : upper + batch]), upper
             values = buffer[: bottom - top]
-            if above < 0:
-                values[:] = wide[0]
-            elif above + 1 >= len(wide):
-                values[:] = wide[-1]
+            if upper == lower:
+                values[:] = wide[upper - first]
             else:
-                at = (np.arange(top, bottom, dtype=np.float32) + np.float32(0.5)) / size
-                at -= np.float32(above + 0.5)
-                np.multiply(wide[above + 1] - wide[above], at[:, None], out=values)
-                values += wide[above]
+                _, weight = _between(np.arange(top, bottom), size, len(self.grid))
+                slope = wide[lower - first] - wide[upper - first]
+                np.multiply(slope, weight[:, None], out=values)
+                values += wide[upper - first]
             yield slice(top, bottom), values
 
-    def rows(self, rows: slice) -> NDArray[np.float32]:
-        """The surface at every pixel of some rows.
+    def _widened(self, grid: NDArray[np.float32]) -> NDArray[np.float32]:
+        """Rows of the grid at every column of the page."""
+        columns = self.grid.shape[1]
+        left, weight = _between(np.arange(self.shape[1]), self.size, columns)
+        wide = grid[:, np.minimum(left + 1, columns - 1)]
+        leftmost = grid[:, left]
+        wide -= leftmost
+        wide *= weight
+        wide += leftmost
+        return wide
 
-        Parameters
-        ----------
-        rows : slice
-            Of the page, any step.
 
-        Returns
-        -------
-        float32, shape (rows, W)
-        """
-        at = np.arange(*rows.indices(self.shape[0]), dtype=np.float32)
-        at = np.clip((at + np.float32(0.5)) / self.size - np.float32(0.5), 0, len(self.grid) - 1)
-        above = at.astype(np.intp)
-        upper = self._wide[above]
-        values = self._wide[np.minimum(above + 1, len(self.grid) - 1)]
-        values -= upper
-        values *= (at - above.astype(np.float32))[:, None]
-        values += upper
-        return values
+def _between(
+    pixels: NDArray[np.integer], size: int, n: int
+) -> tuple[NDArray[np.intp], NDArray[np.float32]]:
+    """Index of the block centre at or before each pixel, and the next one's weight."""
+    at = (pixels + 0.5) / size - 0.5
+    at = np.clip(at, 0, n - 1)
+    before = at.astype(np.intp)
+    return before, (at - before).astype(np.float32)
 
 
 def sliding_max(values: NDArray[np.uint8], size: int) -> NDArray[np.uint8]:

@@ -115,7 +115,7 @@ def close_paper(grey: NDArray[np.uint8], stroke_px: float) -> Surface:
         total = _blurred(_halved((is_paper * cells).astype(np.float32)), sigma)
         trust = weight / (weight + np.float32(_FEW))
         mean = total / np.maximum(weight, np.float32(1e-6))
-        surface = closing + trust * (mean - closing)
+        surface = (closing + trust * (mean - closing)).astype(np.float32, copy=False)
         level = Surface(surface, 2, cells.shape).rows(slice(None))
     return Surface(np.maximum(surface, 1.0), 2 * _CELL, grey.shape)
 

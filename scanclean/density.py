@@ -17,7 +17,7 @@ from PIL import Image, ImageFilter
 from scanclean.blocks import Surface, block_moments, sliding_max, sliding_min
 from scanclean.units import MM_PER_INCH, Resolution
 
-__all__ = ["BLOCK", "DENSITY", "Tone", "measure_tone", "otsu_level", "run_length"]
+__all__ = ["BLOCK", "DENSITY", "Tone", "level_counts", "measure_tone", "otsu_level", "run_length"]
 
 BLOCK = 8
 """Side in pixels of the blocks whose moments `Tone` holds."""
@@ -139,7 +139,7 @@ def measure_tone(
     mean, square, noise = _darkness_moments(grey, paper)
     ratio = _ratio(grey, paper)
 
-    histogram = np.array(Image.fromarray(ratio).histogram())
+    histogram = level_counts(ratio)
     ink_darkness = _ink_darkness(ratio, histogram, noise)
     blank = ink_darkness == 0.0
     stroke, sharpness, faint, soft = _STROKE_DEFAULT, 1.0, 0.0, 0.0
@@ -162,6 +162,24 @@ def measure_tone(
         mean=mean,
         square=square,
     )
+
+
+def level_counts(grey: NDArray[np.uint8]) -> NDArray[np.int64]:
+    """Histogram of a grey page: pixels of each level.
+
+    Returns
+    -------
+    int64, shape (256,)
+    """
+    # four neighbours as the bands of one image: their counters do not wait for each other, where
+    # those of a page that is mostly one level would
+    flat = grey.ravel()
+    whole = flat.size // 4096 * 4096
+    count = np.bincount(flat[whole:], minlength=256)
+    if whole:
+        bands = Image.fromarray(flat[:whole].reshape(-1, 1024, 4))
+        count += np.array(bands.histogram(), np.int64).reshape(4, 256).sum(axis=0)
+    return count
 
 
 def otsu_level(histogram: NDArray[np.integer]) -> int:
@@ -209,7 +227,7 @@ def run_length(mask: NDArray[np.bool_]) -> NDArray[np.intp]:
 
 def _quantile(values: NDArray[np.uint8], share: float) -> int:
     """Smallest level that at least a share of the pixels do not exceed."""
-    count = np.cumsum(Image.fromarray(values).histogram())
+    count = np.cumsum(level_counts(values))
     return int(np.searchsorted(count, share * count[-1]))
 
 
@@ -231,10 +249,12 @@ def _is_light_on_dark(coarse: NDArray[np.uint8]) -> bool:
     height, width = (n // side * side for n in coarse.shape)
     if not (height and width):
         return bool(np.median(coarse) < 128 and coarse.max() > 128)
-    cells = coarse[:height, :width].reshape(height // side, side, width // side, side)
-    low = cells.min(axis=(1, 3)).astype(np.float64)
-    high = cells.max(axis=(1, 3)).astype(np.float64)
-    skewness = cells.mean(axis=(1, 3)) - (low + high) / 2
+    rows = coarse[:height, :width].reshape(height // side, side, width)
+    columns = (height // side, width // side, side)
+    low = rows.min(axis=1).reshape(columns).min(axis=2).astype(np.float64)
+    high = rows.max(axis=1).reshape(columns).max(axis=2).astype(np.float64)
+    mean = rows.sum(axis=1, dtype=np.uint32).reshape(columns).sum(axis=2) / side**2
+    skewness = mean - (low + high) / 2
     is_dark = _quantile(coarse, 0.5) < (_quantile(coarse, 0.01) + _quantile(coarse, 0.99)) / 2
     return bool(is_dark and skewness.sum() < -0.1 * (high - low).sum())
 
@@ -252,30 +272,35 @@ def _paper_surface(
     """
     side = 2 * max(1, round(_CLOSING_MM * per_mm / 2)) + 1
     closed = sliding_min(sliding_max(coarse, side), side)
-    is_paper = coarse >= np.maximum(0.93 * closed, _BLACK * _quantile(closed, 0.8))
-    is_paper &= coarse <= 1.15 * closed
+    level = np.arange(256)
+    lowest = np.maximum(np.ceil(0.93 * level), _BLACK * _quantile(closed, 0.8)).astype(np.uint8)
+    highest = np.minimum(1.15 * level, 255).astype(np.uint8)
+    is_paper = (coarse >= lowest[closed]) & (coarse <= highest[closed])
     group = max(1, round(_PAPER_MM * per_mm / 2))
     weight = is_paper.astype(np.float32)
     share = np.asarray(Image.fromarray(weight).reduce(group))
-    level = np.asarray(Image.fromarray(weight * coarse).reduce(group))
-    level = level / np.maximum(share, 1e-6)
-    smooth = _fill(level, share)
+    total = np.asarray(Image.fromarray(weight * coarse).reduce(group))
+    mean = total / np.maximum(share, np.float32(1e-6))
+    smooth = _fill(mean, share)
     # what smoothing flattened is added back: twicing (Tukey 1977, Exploratory Data Analysis)
-    smooth += _fill(level - smooth, share)
+    smooth += _fill(mean - smooth, share)
     return Surface(np.clip(smooth, 1.0, 255.0), step * group, shape)
 
 
 def _fill(level: NDArray[np.float32], weight: NDArray[np.float32]) -> NDArray[np.float32]:
     """Weighted mean round each cell; where there is no weight, of wider rounds or of all."""
-    from scipy.ndimage import gaussian_filter
+    from scipy.ndimage import gaussian_filter, uniform_filter
 
-    total = np.full(level.shape, 1e-5, np.float32)
-    value = total * float((level * weight).sum() / max(weight.sum(), 1e-6))
-    for sigma, importance in ((1.5, 1.0), (8.0, 1e-2)):
-        total += importance * gaussian_filter(weight, sigma, mode="constant", truncate=2.5)
-        value += importance * gaussian_filter(level * weight, sigma, mode="constant", truncate=2.5)
-    filled: NDArray[np.float32] = value / total
-    return filled
+    product = level * weight
+    total = gaussian_filter(weight, 1.5, mode="constant", truncate=2.5)
+    value = gaussian_filter(product, 1.5, mode="constant", truncate=2.5)
+    # what is far from any paper goes by the mean of a wider round, and at last of the page
+    for importance, wide in ((1e-2, 25), (1e-3, 125)):
+        total += importance * uniform_filter(weight, wide, mode="constant")
+        value += importance * uniform_filter(product, wide, mode="constant")
+    total += np.float32(1e-5)
+    value += np.float32(1e-5) * float(product.sum() / max(weight.sum(), 1e-6))
+    return (value / total).astype(np.float32, copy=False)
 
 
 def _darkness_moments(
@@ -323,8 +348,14 @@ def _ink_darkness(ratio: NDArray[np.uint8], histogram: NDArray[np.integer], nois
     """
     darkness = 1.0 - np.arange(256) / 255.0
     stands_out = darkness > _SIGMAS * noise
-    out = ratio < np.count_nonzero(stands_out)  # darkness falls with the level
-    if np.count_nonzero(out[:, 1:] & out[:, :-1]) < _FEWEST_PAIRS:
+    level = np.count_nonzero(stands_out)  # darkness falls with the level
+    pairs = 0
+    for rows in np.array_split(ratio, 16):  # a page with ink shows it soon
+        out = rows < level
+        pairs += int(np.count_nonzero(out[:, 1:] & out[:, :-1]))
+        if pairs >= _FEWEST_PAIRS:
+            break
+    else:
         return 0.0
     weight = histogram * stands_out
     return float((weight * darkness**2).sum() / (weight * darkness).sum())
