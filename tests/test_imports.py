@@ -21,7 +21,8 @@ files pagewrite pageio
 blocks smoothing density contrast outlines shade relaxation threshold
 skew edges
 tracks profiles crossings removal frames ruling
-textmeasure upright neighbours baselines columns textlines places slant specks glyphs reading
+textmeasure upright neighbours clutter baselines columns textlines places marks slant specks glyphs
+reading
 holes ledger layout steps recipe clean
 sources runlog work pool batch
 score cli
