@@ -36,6 +36,7 @@ __all__ = ["Recipe", "parse_recipe", "read_recipe", "to_toml"]
 _MAX_BYTES = 200_000  # a recipe with every key and hundreds of steps is far below
 _STEP = "step"  # the table of one step, repeated: [[step]]
 _PICTURES = ("picture", "miss")
+_EXAMPLE = Step(operation="closing", after="specks", element="disk", radius=Length(0.05, "mm"))
 
 
 @dataclass(frozen=True)
@@ -432,6 +433,7 @@ def _step_help() -> str:
         f"[[{_STEP}]]",
     ]
     lines += [f"{name}: {key.text} ({key.allowed})" for name, key in _keys(Step).items()]
+    lines += ["such as:", *_step_toml(_EXAMPLE).splitlines()]
     return "".join(f"# {line}\n" for line in lines)
 
 

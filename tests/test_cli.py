@@ -311,6 +311,27 @@ def test_a_resolution_that_is_not_stated_is_given_or_estimated(here):
     assert check_page("given", "scan")["source"]["dpi"] == [300.0, 300.0]
 
 
+def test_a_page_is_turned_upright_and_the_layout_leads_back_to_the_scan(here):
+    lines = ("Saltmarrow Harbour Office", "cargo of salt and of herring", "twelve tons, dry")
+    page = note(*lines, size=(900, 500))
+    page.rotate(-3, expand=True, fillcolor=235, resample=Image.Resampling.BICUBIC).save(
+        "scan.png", dpi=(300, 300)
+    )
+    for name, options in (("plain", ()), ("upright", ("--straighten",))):
+        assert scanclean("clean", "scan.png", "-o", name, *options).returncode == 0
+    plain, upright = check_page("plain", "scan"), check_page("upright", "scan")
+    # turned clockwise by 3 degrees the lines fall to the right
+    assert plain["page"]["skew_degrees"] == pytest.approx(3, abs=0.3)
+    assert plain["page"]["to_source"] == [[1, 0, 0], [0, 1, 0]]
+    assert upright["page"]["skew_degrees"] == pytest.approx(3, abs=0.3)
+    (left, top), (right, end) = upright["lines"][0]["baseline"]
+    assert abs(end - top) < 0.005 * (right - left)
+    to_source = np.array(upright["page"]["to_source"])
+    scan = to_source @ np.array([[left, right], [top, end], [1, 1]])
+    slope = (scan[1, 1] - scan[1, 0]) / (scan[0, 1] - scan[0, 0])
+    assert np.degrees(np.arctan(slope)) == pytest.approx(3, abs=0.3)
+
+
 def test_a_second_run_does_only_what_is_missing_and_replace_does_all(box12):
     call = ("clean", "box12", "-o", "out")
     scanclean(*call)

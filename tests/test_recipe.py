@@ -171,6 +171,9 @@ def test_a_value_of_ones_own_is_printed_beside_the_default():
 
 def test_how_a_step_is_written_is_printed_until_there_is_one():
     assert "# [[step]]" in to_toml(Recipe())
+    example = to_toml(Recipe()).split("# such as:\n")[1]
+    (step,) = parse_recipe(re.sub("^# ", "", example, flags=re.MULTILINE)).steps
+    assert step.operation == "closing"
     one = parse_recipe('[[step]]\noperation = "opening"\nelement = "disk"\nradius = "0.1 mm"')
     assert '\n[[step]]\noperation = "opening"\n' in to_toml(one)
 
