@@ -43,10 +43,12 @@ def is_lump(components: Components, shapes: Shapes, measures: TextMeasures) -> B
 def is_hair(components: Components, shapes: Shapes, measures: TextMeasures) -> Bools:
     """(C,) which components are much longer than thick, and thinner than strokes all along.
 
-    The upright strokes of small print on a page of large writing are as thin, but short.
+    The strokes of small print on a page of large writing and the bars of dashes in a thin face may
+    be as thin, but they are upright or level, and short.
     """
     length = np.hypot(shapes.width, shapes.height)
     stroke = measures.stroke_px * shapes.frame.aspect
     thick = components.area * shapes.frame.aspect / np.maximum(length, 1)
-    letter = (shapes.width < 0.4 * shapes.height) & (length < 2 * measures.x_height_px)
+    letter = (shapes.width < 0.4 * shapes.height) | (shapes.height < 0.25 * shapes.width)
+    letter &= length < 2 * measures.x_height_px
     return (thick < _HAIR_OF_STROKE * stroke) & (length > 4 * stroke) & ~letter
