@@ -18,7 +18,7 @@ ORDER = """
 errors units settings
 runs elements labels morphology
 files pagewrite pageio
-blocks smoothing density contrast outlines shade relaxation threshold
+blocks smoothing density contrast outlines shade solids relaxation threshold
 skew edges
 tracks profiles crossings removal frames ruling
 textmeasure upright neighbours clutter baselines columns textlines places marks slant specks glyphs
