@@ -30,7 +30,7 @@ from numpy.typing import NDArray
 from PIL import (
     Image,
     Jpeg2KImagePlugin,  # noqa: F401
-    JpegImagePlugin,  # noqa: F401
+    JpegImagePlugin,
     PngImagePlugin,  # noqa: F401
     TiffImagePlugin,
     UnidentifiedImageError,
@@ -92,6 +92,8 @@ _SIGNATURES = (
     b"\0\0\0\x0cjP  ",
     b"\xff\x4f\xff\x51",
 )
+
+_END_OF_IMAGE = b"\xff\xd9"  # a JPEG marker: ITU-T T.81, Table B.1
 
 # TIFF 6.0 tags
 _NEW_SUBFILE_TYPE = 254
@@ -242,13 +244,15 @@ class ScanReader:
         self._name = Path(path).name
         self._file = open_file(path)
         try:
-            self._image = self._open_image()
-            self._frames = _tiff_pages(self._file) if self._is_tiff else [0]
+            with _decoding(self._where):
+                self._image = self._open_image()
+                self._frames = _tiff_pages(self._file) if self._is_tiff else [0]
         except BaseException:
             self._file.close()
             raise
         self.n_pages = len(self._frames)
         self._resolutions: dict[int, Resolution | None] = {}
+        self._refused: dict[int, str] = {}
 
     def __enter__(self) -> ScanReader:
         return self
@@ -281,8 +285,7 @@ class ScanReader:
                 f"{self._where}: no {_READABLE} file, whatever its name says; "
                 "convert it to one of these or leave it out"
             )
-        with _decoding(self._where):
-            return Image.open(self._file, formats=_FORMATS)
+        return Image.open(self._file, formats=_FORMATS)
 
     def read(self, page: int) -> Scan:
         """Read one page, counted from 1.
@@ -296,10 +299,16 @@ class ScanReader:
                 f"{self._where}: there is no page {page}; "
                 + ("it has one page" if self.n_pages == 1 else f"choose from 1 to {self.n_pages}")
             )
+        if page in self._refused:  # Pillow would hand out what it had of it as a whole page
+            raise PageError(self._refused[page])
         where = self._where if self.n_pages == 1 else f"{self._where}, page {page}"
-        with _decoding(where):
-            image, dpi = self._load(self._frames[page - 1], where)
-            pixels = _pixels(image)
+        try:
+            with _decoding(where):
+                image, dpi = self._load(self._frames[page - 1], where)
+                pixels = _pixels(image)
+        except PageError as error:
+            self._refused[page] = str(error)
+            raise
         return Scan(pixels, dpi, page, self.n_pages, self._name)
 
     def _load(self, frame: int, where: str) -> tuple[Image.Image, Resolution | None]:
@@ -322,10 +331,24 @@ class ScanReader:
             with _libtiff_complaints(where):
                 image.load()
             return image, self._resolutions[frame]
+        if isinstance(image, JpegImagePlugin.JpegImageFile) and image.tile:  # not yet decoded
+            self._check_jpeg(where)
         image.load()
         orientation = _exif(image).get(_ORIENTATION, 1)
         dpi = _resolution(*_stated_dpi(image), orientation)
         return image.transpose(_UPRIGHT[orientation]) if orientation in _UPRIGHT else image, dpi
+
+    def _check_jpeg(self, where: str) -> None:
+        """Refuse JPEG code without an end: libjpeg takes the zeros of a gap for code of grey.
+
+        Such files are left where a copy of known size broke off. Inside the code, a marker
+        such as that of the end cannot occur (ITU-T T.81, B.1.1.5).
+        """
+        place = self._file.tell()  # where Pillow stopped: the markers before the code are read
+        code = self._file.read()
+        self._file.seek(place)
+        if _END_OF_IMAGE not in code:
+            raise _damaged(where, "it has no end")
 
     def _check_group4(self, tags: Any, where: str) -> None:
         """Refuse T.6 code with a gap: libtiff takes it for the end and leaves the rest blank.

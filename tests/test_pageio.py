@@ -1,5 +1,6 @@
 from __future__ import annotations
 
+import contextlib
 import errno
 import io
 import os
@@ -667,6 +668,21 @@ def test_a_broken_group_4_code_is_refused_and_not_guessed(tmp_path, damage, shar
     with pytest.raises(PageError) as error:
         pageio.read_page(path)
     assert_one_clear_line(error, "a.tif", "damaged")
+
+
+# the code of WebP has neither an end mark nor a checksum that could be looked for
+@pytest.mark.parametrize("kind", [kind for kind in KINDS if kind != "webp"])
+def test_a_page_that_was_refused_is_refused_again(tmp_path, kind):
+    path = tmp_path / "a"
+    data = encoded(kind)
+    path.write_bytes(data[: len(data) * 3 // 5] + bytes(len(data) * 2 // 5))
+    messages = []
+    with contextlib.suppress(PageError), pageio.ScanReader(path) as reader:
+        for _ in range(2):
+            with pytest.raises(PageError) as error:
+                reader.read(1)
+            messages.append(str(error.value))
+        assert messages[0] == messages[1]
 
 
 def test_what_others_write_to_standard_error_while_a_tiff_is_read_gets_through(capfd):
