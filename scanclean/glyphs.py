@@ -32,6 +32,7 @@ Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
 _BREAK_OF_STROKE = 0.3  # width of a break that wear makes, of the stroke's
+_FOOT = -0.1  # in x-heights: what lies lower hangs below the line
 _LOOK = 5  # components further along the line that may still overlap
 
 
@@ -43,6 +44,8 @@ class Parts:
     ----------
     places : Places
         Of the components, sheared upright.
+    left, right : (C,) float array
+        How far they reach along their line without what hangs below it, in x-heights.
     glyph : (C,) int array
         The glyph of each component, in no order.
     n : int
@@ -50,6 +53,8 @@ class Parts:
     """
 
     places: Places
+    left: Floats
+    right: Floats
     glyph: Ints
     n: int
 
@@ -71,7 +76,11 @@ def join_parts(
     shapes = place(components, spread, lines.frame)
     places = find_places(lines, shapes)
     slants = line_slants(components, lines, places.line)
-    places = upright_type(places, slants, components, lines)
+    leaning = (places.line >= 0) & (np.append(slants, 0.0)[places.line] != 0)
+    left, right = upright_extents(components, lines, places, slants, leaning)
+    hanging = (places.line >= 0) & (places.bottom < -0.2) & (places.top > 0.3)
+    places = replace(places, left=left, right=right)
+    reach = upright_extents(components, lines, places, slants, hanging, lowest=_FOOT)
     holes = components.holes
     marks, hosts = _marks_and_letters(places)
     hosted = np.zeros(components.n, bool)
@@ -90,44 +99,54 @@ def join_parts(
     first = np.concatenate((marks, upper, left, slash, piece))
     second = np.concatenate((hosts, lower, right, ring, whole))
     n, glyph = chains(first, second, components.n)
-    return Parts(places, glyph, n)
+    return Parts(places, *reach, glyph, n)
 
 
-def upright_type(places: Places, slants: Floats, components: Components, lines: LineSet) -> Places:
-    """The places with slanted type sheared upright about the baseline, line by line.
+def upright_extents(
+    components: Components,
+    lines: LineSet,
+    places: Places,
+    slants: Floats,
+    chosen: Bools,
+    *,
+    lowest: float = -np.inf,
+) -> tuple[Floats, Floats]:
+    """(C,), (C,) left and right of components whose slanted type is sheared upright.
 
     Parameters
     ----------
-    places : Places
-    slants : (L,) float array
-        Of `slant.line_slants`.
     components : Components
     lines : LineSet
+    places : Places
+        Of the components as they stand; gives those that are not chosen.
+    slants : (L,) float array
+        Of `slant.line_slants`.
+    chosen : (C,) bool array
+        Components on lines.
+    lowest : float
+        Level in x-heights; what lies below is left out, unless all of it does.
     """
-    leaning = (places.line >= 0) & (np.append(slants, 0.0)[places.line] != 0)
-    if not leaning.any():
-        return places
     runs, label = components.runs, components.run_label
-    mine = np.flatnonzero(leaning[label])
+    mine = np.flatnonzero(chosen[label])
+    if mine.size == 0:
+        return places.left, places.right
     owner = label[mine]
-    # in pixels: x + slant * height over the baseline, which is level under one component
     frame, line = lines.frame, places.line[owner]
     x_height = lines.x_height[line]
     y = runs.row[mine] + 0.5
     ends = [frame.upright(x[mine].astype(np.float64), y) for x in (runs.start, runs.stop)]
-    _, top = frame.upright(
-        (components.box[:, 0] + components.box[:, 2]) / 2, components.box[:, 1].astype(np.float64)
-    )
+    # the baseline is level under one component
+    box = components.box.astype(np.float64)
+    _, top = frame.upright((box[:, 0] + box[:, 2]) / 2, box[:, 1])
     base = (top + places.top * np.append(lines.x_height, 0.0)[places.line])[owner]
-    left, right = (x - slants[line] * (base - across) for x, across in ends)
     bounds = np.full((2, places.line.size), np.inf)
-    np.minimum.at(bounds[0], owner, left / x_height)
-    np.minimum.at(bounds[1], owner, -right / x_height)
-    return replace(
-        places,
-        left=np.where(leaning, bounds[0], places.left),
-        right=np.where(leaning, -bounds[1], places.right),
-    )
+    for side, (sign, (x, across)) in enumerate(zip((1, -1), ends, strict=True)):
+        seen = (base - across) > lowest * x_height
+        place = sign * (x - slants[line] * (base - across)) / x_height
+        np.minimum.at(bounds[side], owner[seen], place[seen])
+    some = chosen & np.isfinite(bounds).all(axis=0)
+    left, right = np.where(some, bounds[0], places.left), np.where(some, -bounds[1], places.right)
+    return left, right
 
 
 def _pairs(places: Places) -> tuple[Ints, Ints]:

@@ -28,11 +28,15 @@ __all__ = ["Glyphs", "TextLines", "number_words", "put_in_order"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-_GAPS = (-0.2, 1.8)  # looked at for the limit between letter and word spaces, in x-heights
-_LIMITS = (0.25, 0.9)
+# gaps looked at for the limit between letter and word spaces, in x-heights: what is wider is a tab
+_GAPS = (-0.2, 1.6)
+_LIMITS = (0.2, 0.9)
+_USUAL_LIMIT = 0.4
 _CLOSE = 0.3  # a line with wider letter spaces is letterspaced
 _ONE_SIZE = 1.12  # lines of x-heights so close, each to the next, are of one size of type
-_GAPS_OF_A_SIZE = 12
+_GAPS_OF_A_SIZE = 40  # lines of a size with fewer take the page's limit
+_GAPS_OF_A_LINE = 5
+_LETTER = 1.6  # wider glyphs are whole words or letters grown together
 _STEPS_FOR_PITCH = 15
 _NEXT_CELL = 1.3  # pitches; columns of a table need not be whole pitches apart
 _AGREED = 0.75  # mean cosine of the phases
@@ -141,10 +145,9 @@ def _hulls(box: Ints, group: Ints, n: int) -> Ints:
 
 def _extents(parts: Parts, line: Ints, lines: LineSet) -> tuple[Floats, Floats]:
     """(G,) left and right of the glyphs along their lines in pixels, sheared upright."""
-    places = parts.places
     left, right = np.full(parts.n, np.inf), np.full(parts.n, -np.inf)
-    np.minimum.at(left, parts.glyph, places.left)
-    np.maximum.at(right, parts.glyph, places.right)
+    np.minimum.at(left, parts.glyph, parts.left)
+    np.maximum.at(right, parts.glyph, parts.right)
     scale = np.append(lines.x_height, 0.0)[line]
     return left * scale, right * scale
 
@@ -275,7 +278,9 @@ def number_words(line: Ints, left: Floats, right: Floats, x_height: Floats) -> I
     span = float(right.max() - left.min()) + 1
     reached = np.maximum.accumulate(right + line * span) - line * span
     gap = (left[after + 1] - reached[after]) / x_height[line[after]]
-    parted = gap > _space_limits(gap, line[after], x_height)
+    wide = (right - left) > _LETTER * x_height[line]
+    letters = ~(wide[after] | wide[after + 1])
+    parted = gap > _space_limits(gap, line[after], x_height, letters)
     pitch = _pitches(line, left, right, after, x_height.size)
     cells = pitch[line[after]]
     fixed = cells > 0
@@ -286,14 +291,15 @@ def number_words(line: Ints, left: Floats, right: Floats, x_height: Floats) -> I
     return word
 
 
-def _space_limits(gap: Floats, line: Ints, x_height: Floats) -> Floats:
-    """For each gap the size from which it parts words.
+def _space_limits(gap: Floats, line: Ints, x_height: Floats, letters: Bools) -> Floats:
+    """For each gap the size from which it parts words; `letters` are gaps between single letters.
 
     The valley between letter and word spaces is looked for among all lines of one size of type;
     each line then takes its own largest jump near it.
     """
     n = x_height.size
-    usual = np.maximum(grouped_median(line, n, gap, 0.0), 0.0)
+    usual = grouped_median(line[letters], n, gap[letters], 0.0)
+    usual[np.bincount(line[letters], minlength=n) < _GAPS_OF_A_LINE] = 0.0
     loose = np.maximum(1.0, usual / _CLOSE)[line]  # letterspaced and hand-printed lines
     scaled = gap / loose
     order = np.argsort(x_height, kind="stable")
@@ -316,8 +322,13 @@ def _space_limits(gap: Floats, line: Ints, x_height: Floats) -> Floats:
 
 
 def _valley(gap: Floats) -> float:
-    """Otsu's limit between letter and word spaces."""
-    count, edges = np.histogram(np.clip(gap, *_GAPS), bins=64, range=_GAPS)
+    """The emptiest size near Otsu's limit between letter and word spaces.
+
+    References
+    ----------
+    N. Otsu, "A threshold selection method from gray-level histograms", IEEE Trans. SMC 9(1), 1979.
+    """
+    count, edges = np.histogram(np.maximum(gap, _GAPS[0]), bins=64, range=_GAPS)
     middle = (edges[1:] + edges[:-1]) / 2
     below = np.cumsum(count)
     above = below[-1] - below
@@ -325,9 +336,14 @@ def _valley(gap: Floats) -> float:
     mean_below = total / np.maximum(below, 1)
     mean_above = (total[-1] - total) / np.maximum(above, 1)
     between = below * above * (mean_above - mean_below) ** 2
-    # every level of an empty valley parts as well: the middle of them
-    best = np.flatnonzero(between >= between.max() * (1 - 1e-9))
-    return float(np.clip(edges[1:][best].mean(), *_LIMITS))
+    if not between.any():
+        return _USUAL_LIMIT
+    limit = max(float(edges[1 + int(np.argmax(between))]), _LIMITS[0])
+    # where letter spaces are many they draw Otsu's limit into the valley's side
+    off = np.log2(np.maximum(middle, edges[1] - edges[0]) / limit)
+    crowd = np.convolve(count, [0.25, 0.5, 0.25], mode="same") + 0.02 * count.max()
+    cost = np.where(np.abs(off) < 1, crowd * (1 + 2 * off * off), np.inf)
+    return float(np.clip(middle[np.argmin(cost)], *_LIMITS))
 
 
 def _step(left: Floats, right: Floats, after: Ints, pitch: Floats) -> Floats:
