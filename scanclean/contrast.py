@@ -23,7 +23,7 @@ INK = 180.0
 _CELL = 4  # pixels of a cell of the reduced page
 _CLOSING_STROKES = 6.0  # what is narrower than this many strokes is closed over
 _LEAST_CLOSING = 28.0  # pixels
-_PAPER_BAND = (0.93, 1.15)  # share of the surface between which a cell is paper
+_PAPER_BAND = (0.07, 0.15)  # share of the surface by which paper lies below and above it
 _SMOOTHING = 0.3  # standard deviation, share of the closing's width
 _ROUNDS = 4  # of lifting the surface off what is no paper
 _FEW = 0.05  # share of paper cells near by at which the closing has half the say
@@ -109,8 +109,9 @@ def close_paper(grey: NDArray[np.uint8], stroke_px: float) -> Surface:
     closing = _halved(closed.astype(np.float32))
     surface = closing
     level = closed.astype(np.float32)
+    below, above = _PAPER_BAND
     for _ in range(_ROUNDS):
-        is_paper = (cells > _PAPER_BAND[0] * level) & (cells < _PAPER_BAND[1] * level)
+        is_paper = (cells > (1 - below) * level) & (cells < (1 + above) * level)
         weight = _blurred(_halved(is_paper.astype(np.float32)), sigma)
         total = _blurred(_halved((is_paper * cells).astype(np.float32)), sigma)
         trust = weight / (weight + np.float32(_FEW))

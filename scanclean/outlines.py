@@ -11,10 +11,12 @@ from scanclean.contrast import INK, Contrast
 from scanclean.labels import label
 from scanclean.runs import RunSet
 
-__all__ = ["Outlines", "find_outlines"]
+__all__ = ["WEAK_SLOPE", "Outlines", "find_outlines"]
 
-_STRONG = 0.175  # slope, share of the ink's contrast a pixel
-_WEAK = 0.075
+WEAK_SLOPE = 0.075 * INK
+"""Least slope of an outline, in steps of contrast a pixel; it must join a strong one."""
+
+_STRONG_SLOPE = 0.175 * INK
 _STRIP = 1 << 17  # pixels of a strip of rows: its arrays stay in the processor's cache
 _TAN_22 = np.float32(0.41421356)
 
@@ -61,7 +63,7 @@ def find_outlines(contrast: Contrast) -> Outlines:
     if height < 3 or width < 3:
         nothing = np.empty(0, np.float32)
         return Outlines(np.empty(0, np.int64), nothing, nothing, slopes)
-    weak, strong = ((8 * share * INK) ** 2 for share in (_WEAK, _STRONG))
+    weak, strong = ((8 * slope) ** 2 for slope in (WEAK_SLOPE, _STRONG_SLOPE))
     found = []
     step = max(8, _STRIP // width)
     for top in range(0, height, step):

@@ -15,6 +15,7 @@ from scanclean.relaxation import relaxed_ink
 from scanclean.runs import RunSet
 from scanclean.settings import setting
 from scanclean.shade import find_shade
+from scanclean.solids import fill_solids
 from scanclean.units import Length, Resolution
 
 __all__ = [
@@ -139,7 +140,7 @@ def threshold(
     method = settings.method
     if method == "adaptive":
         if not is_clean(tone):
-            return _thresholded_by_outlines(grey, tone.stroke_px)
+            return _thresholded_by_outlines(grey, tone)
         mask = clean_ink(tone)
     elif method == "otsu":
         mask = grey <= otsu_level(level_counts(grey))
@@ -270,11 +271,12 @@ def clean_ink(tone: Tone) -> NDArray[np.bool_]:
     return darker(tone.ratio, Surface(level, BLOCK, tone.ratio.shape))
 
 
-def _thresholded_by_outlines(grey: NDArray[np.uint8], stroke_px: float) -> Thresholded:
+def _thresholded_by_outlines(grey: NDArray[np.uint8], tone: Tone) -> Thresholded:
     """Ink and shade of a page that is not clean."""
-    contrast = measure_contrast(grey, stroke_px)
+    contrast = measure_contrast(grey, tone.stroke_px)
     outlines = find_outlines(contrast)
     ink = RunSet.from_mask(relaxed_ink(contrast, outlines))
+    ink = fill_solids(ink, grey, stroke_px=tone.stroke_px)
     return Thresholded(ink, find_shade(ink, contrast, outlines))
 
 

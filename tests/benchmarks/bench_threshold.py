@@ -41,7 +41,7 @@ CONTROLS = {
 CONSTANTS = {  # every constant of the way through hard pages, by module
     "contrast": "_CLOSING_STROKES _LEAST_CLOSING _PAPER_BAND _SMOOTHING _FEW _GLARE _DARK_PAPER "
     "_INK_QUANTILE",
-    "outlines": "_STRONG _WEAK",
+    "outlines": "_STRONG_SLOPE WEAK_SLOPE",
     "relaxation": "_PAPER _PAPER_PULL _DATA _SOLID _FEWEST _FULL_OUTLINE",
     "shade": "_REFERENCE _LARGER _EXTENT _NEEDED _SHADOW_THICKNESS _SHADOW_EXTENT",
     "threshold": "_BORDER _NOISY _DARK _CRISP _FAINT _SOFT",
