@@ -313,11 +313,12 @@ def _space_limits(gap: Floats, line: Ints, x_height: Floats, letters: Bools) -> 
             limit[size == k] = _valley(scaled[mine])
     order = np.lexsort((scaled, line))
     ranked, of = scaled[order], line[order]
-    jump, middle = np.diff(ranked), (ranked[1:] + ranked[:-1]) / 2
-    near = of[1:] == of[:-1]
-    near &= (middle > 0.6 * limit[of[1:]]) & (middle < 1.6 * limit[of[1:]])
-    best = keyed_best(of[1:][near], -jump[near])
-    limit[of[1:][near][best]] = middle[near][best]
+    same, near = of[1:] == of[:-1], limit[of[1:]]
+    low, high = np.maximum(ranked[:-1], 0.6 * near), np.minimum(ranked[1:], 1.6 * near)
+    some = same & (high > low)
+    of, low, high = of[1:][some], low[some], high[some]
+    best = keyed_best(of, low - high)
+    limit[of[best]] = (low + high)[best] / 2
     return limit[line] * loose
 
 
@@ -364,7 +365,7 @@ def _pitches(line: Ints, left: Floats, right: Floats, after: Ints, n: int) -> Fl
     of = line[after]
     pitch = np.zeros(n)
     usual = grouped_median(of, n, step, 0.0)
-    some = (step > 0) & (usual[of] > 0)
+    some = (step > 0) & (step < 2.6 * usual[of])  # cells of a table are not in step
     if not some.any():
         return pitch
     step, of = step[some], of[some]
