@@ -23,7 +23,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 _SLOPES = np.array([0, 0.25, -0.25, 0.5, -0.5, 0.75, -0.75, 1, -1, 1.4, -1.4, 2, -2])  # dx / dy
-_OPPOSITE = np.array([int(np.flatnonzero(_SLOPES == -s)[0]) for s in _SLOPES])
+_OPPOSITE = np.array([_SLOPES.tolist().index(-s) for s in _SLOPES.tolist()])
 _STEEPNESS = 0.6  # pixels of length that a slope of 1 must gain over an upright way
 _LEAST = 3  # pixels a stroke sticks out of the rule
 _LONGEST = 0.7  # of the longest way from a point: nearly as long will do

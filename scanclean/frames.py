@@ -1,4 +1,4 @@
-"""Which short lines belong to ruled work: sides of boxes, ticks of combs, pieces of broken rules.
+"""Which short lines belong to ruled work: sides of boxes and ticks of combs.
 
 A long straight line is a rule by itself. A short one could be the stroke of a letter; it is a rule
 where other lines say so. Lines are given in millimetres here, each with its position ``along`` its
@@ -21,9 +21,9 @@ Floats = NDArray[np.float64]
 _JOINT_MM = 0.45  # between the end of a line and the line it stands on
 _BOX_SIDES = 6  # like sides of boxes in a row that no rule joins: a row of three at least
 _TICK_PITCH_MM = 3.2  # the closest ticks; characters of a typewriter stand closer
+_CLEAR = 0.6  # isolated: what half of a row's ticks are at least
 _ROW_MM = 40.0  # ticks of one row are compared within this
-_CONTINUES_MM = 40.0
-_HATCH_MM, _HATCH_LINES = 6.0, 5
+_HATCH_MM, _HATCH_LINES = 3.0, 5
 
 
 @dataclass(frozen=True, eq=False)
@@ -40,6 +40,8 @@ class Segments:
         Half the thickness.
     peak : (n,) float array
         Density.
+    isolated : (n,) float array
+        Share of the length at which the line stands alone.
     """
 
     start: Floats
@@ -48,6 +50,7 @@ class Segments:
     slope: Floats
     half: Floats
     peak: Floats
+    isolated: Floats
 
     def __len__(self) -> int:
         return self.start.size
@@ -81,8 +84,7 @@ def worth_measuring(lines: Pair, rules: Pair) -> tuple[Bools, Bools]:
     """Short lines that their place alone does not rule out: the first sieve of `short_rules`."""
     closed, _ = close_frames(lines, rules)
     stand = [meets(lines[d], rules[1 - d]).any(axis=(1, 2)) for d in (0, 1)]
-    run_on = [continues(lines[d], rules[d]) for d in (0, 1)]
-    return closed[0] | stand[0] | run_on[0], closed[1] | stand[1] | run_on[1]
+    return closed[0] | stand[0], closed[1] | stand[1]
 
 
 def short_rules(lines: Pair, rules: Pair) -> tuple[Bools, Bools]:
@@ -105,10 +107,7 @@ def short_rules(lines: Pair, rules: Pair) -> tuple[Bools, Bools]:
         in_row = (alike(lines[d]) & closed[d] & closed[d][:, None]).sum(axis=1) >= _BOX_SIDES
         boxes.append(joined[d] | in_row)
     frames = [Segments.joined(rules[d], lines[d].select(boxes[d])) for d in (0, 1)]
-    found = [
-        boxes[d] | find_ticks(lines[d], frames[1 - d]) | continues(lines[d], rules[d])
-        for d in (0, 1)
-    ]
+    found = [boxes[d] | find_ticks(lines[d], frames[1 - d]) for d in (0, 1)]
     return found[0], found[1]
 
 
@@ -206,7 +205,9 @@ def find_ticks(lines: Segments, rules: Segments) -> Bools:
     make &= np.abs(rules.peak - lines.peak[:, None]) <= 0.35 * rules.peak
     stands = (stands & make).any(axis=1)
     rows = alike(lines) & stands & stands[:, None]
-    ticks = rows.sum(axis=1) >= 4
+    # stems of letters have feet and bars
+    clear = (rows & (lines.isolated >= _CLEAR)).sum(axis=1)
+    ticks = (rows.sum(axis=1) >= 4) & (2 * clear >= rows.sum(axis=1))
     place = lines.middle
     for i in np.flatnonzero(ticks):
         step = np.diff(np.sort(place[rows[i]]))
@@ -220,33 +221,22 @@ def find_ticks(lines: Segments, rules: Segments) -> Bools:
     return np.asarray(ticks)
 
 
-def continues(lines: Segments, rules: Segments) -> Bools:
-    """Lines that lie on the straight continuation of a rule of the same thickness.
-
-    Returns
-    -------
-    (n,) bool array
-    """
-    gap = np.maximum(rules.start - lines.stop[:, None], lines.start[:, None] - rules.stop)
-    gap = np.maximum(gap, 0)
-    along = ((lines.start + lines.stop) / 2)[:, None]
-    miss = np.abs(rules.offset + rules.slope * along - lines.middle[:, None])
-    same = np.abs(lines.half[:, None] - rules.half) < 0.085 + 0.3 * rules.half
-    return np.asarray(((gap < _CONTINUES_MM) & (miss < 0.1 + 0.004 * gap) & same).any(axis=1))
-
-
-def hatched(lines: Segments, all_lines: Segments) -> Bools:
+def hatched(lines: Segments) -> Bools:
     """Lines in a thicket of their likes: bars of a barcode, hatching.
 
     Returns
     -------
     (n,) bool array
-        Whether more than five of `all_lines`, the line itself counted, run beside it over the same
-        length within 6 mm.
+        Whether the line is one of five or more, each beside the next over the same length and no
+        more than 3 mm away.
     """
-    overlap = np.minimum(lines.stop[:, None], all_lines.stop)
-    overlap = overlap - np.maximum(lines.start[:, None], all_lines.start)
-    along = (all_lines.start + all_lines.stop) / 2
-    apart = np.abs(lines.offset[:, None] + lines.slope[:, None] * along - all_lines.middle)
-    like = (overlap > 0.8 * lines.length[:, None]) & (overlap > 0.8 * all_lines.length)
-    return np.asarray((like & (apart < _HATCH_MM)).sum(axis=1) > _HATCH_LINES)
+    from scipy.sparse import csr_array
+    from scipy.sparse.csgraph import connected_components
+
+    overlap = np.minimum(lines.stop[:, None], lines.stop)
+    overlap = overlap - np.maximum(lines.start[:, None], lines.start)
+    along = (lines.start + lines.stop) / 2
+    apart = np.abs(lines.offset[:, None] + lines.slope[:, None] * along - lines.middle)
+    like = (overlap > 0.8 * lines.length[:, None]) & (overlap > 0.8 * lines.length)
+    _, thicket = connected_components(csr_array(like & (apart < _HATCH_MM)), directed=False)
+    return np.asarray(np.bincount(thicket)[thicket] >= _HATCH_LINES)

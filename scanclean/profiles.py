@@ -136,9 +136,19 @@ class Lines:
     def isolated(self) -> Floats:
         """(T,) float: share of the track's columns in which the line stands alone."""
         alone = self.within & self.free & (self.strength > 0.4 * self.level[self.track])
+        alone &= self.strength < 1.4 * self.amplitude + 0.05
         n = len(self)
         return np.bincount(self.track[alone], minlength=n) / np.maximum(
             np.bincount(self.track[self.within], minlength=n), 1
+        )
+
+    def absent(self) -> Floats:
+        """(T,) float: share of the columns without strokes in which there is no line either."""
+        free = self.within & self.free
+        none = free & (self.strength < 0.25 * self.level[self.track])
+        n = len(self)
+        return np.bincount(self.track[none], minlength=n) / np.maximum(
+            np.bincount(self.track[free], minlength=n), 1
         )
 
     def straightness(self) -> tuple[Floats, Floats, Floats]:
@@ -458,7 +468,7 @@ class _Measure:
         rows = self._rows(line / power[:, :, None])
         strength = np.einsum("ij,ij->i", self.density, rows).astype(float)
         strength -= ((ground * line).sum(axis=2) / power).ravel()[self.place]
-        self.strength = strength
+        self.strength = np.where(self.on_page, strength, 0.0)
         # what the model leaves of the column, over the column
         core = self._rows(((u >= lo) & (u <= hi)).astype(float))
         square = np.einsum("ij,ij,ij->i", self.density, self.density, core)
@@ -479,11 +489,11 @@ class _Measure:
         reach = self.strips.tracks.thickness[:, None] / 2
         middle = np.where(np.abs(self.bin_u) <= reach + 1.5, profile, 0)
         peak = (middle[:, :-2] + middle[:, 1:-1] + middle[:, 2:]).max(axis=1) / 3
-        left = np.median(profile[:, :_OVERSAMPLING], axis=1)
-        right = np.median(profile[:, -_OVERSAMPLING:], axis=1)
+        left = _low_quartile(profile, self.bin_u < -reach - 1)
+        right = _low_quartile(profile, self.bin_u > reach + 1)
         across = np.clip((self.bin_u + reach + 1) / (2 * reach + 2), 0, 1)
         ground = left[:, None] * (1 - across) + right[:, None] * across
-        # a level of half the peak is no ground but another line
+        # the lower quartile: another line near by is no ground
         return np.maximum(profile - ground * (np.maximum(left, right) < 0.5 * peak)[:, None], 0)
 
     def _extent(self, profile: Floats) -> tuple[Floats, Floats]:
@@ -575,8 +585,10 @@ class _Measure:
         """The line's amplitude in each column, and the columns that hold nothing else."""
         track = self.track
         lying = self.strength > (1 + _ABOVE) * envelope + 2 * (_SPREAD * level + 0.02)[track]
-        # a darker stretch of the line itself has the line's very shape
-        darker = lying & (self.misfit < 0.1) & (self.strength < 1.6 * envelope)
+        # a darker stretch of the line itself has the line's very shape; much darker ones begin
+        # and end by and by, where a stroke has ends
+        darker = lying & (self.misfit < 0.1)
+        darker &= (self.strength < 1.6 * envelope) | _gradual(self.strength, lying, envelope)
         use = self.free & ~(lying & ~darker)
         few = np.bincount(track[use & self.core], minlength=self.n) < 8
         use |= self.free & few[track]
@@ -585,7 +597,7 @@ class _Measure:
             return np.zeros(track.size), np.zeros(track.size, bool)
         smooth = running_quantile(self.strength[known], np.ones(known.size, bool), 7)
         amplitude = np.interp(np.arange(track.size), known, smooth)
-        amplitude = np.minimum(amplitude, np.where(darker, 1.6, _CAP) * envelope)
+        amplitude = np.minimum(amplitude, np.where(darker, np.inf, _CAP) * envelope)
         return np.maximum(amplitude, 0), ~_grown(~use, 1)
 
     def _dashed(self, envelope: Floats, mm: float) -> Bools:
@@ -598,6 +610,13 @@ class _Measure:
 
 
 # ---- small tools
+
+
+def _low_quartile(values: Floats, where: Bools) -> Floats:
+    """Of the chosen values of each row, of which there are some."""
+    ranked = np.sort(np.where(where, values, np.inf), axis=1)
+    place = (where.sum(axis=1) - 1) // 4
+    return np.asarray(ranked[np.arange(values.shape[0]), place])
 
 
 def _ranked(values: Floats, valid: Bools, width: int) -> tuple[Floats, Ints]:
@@ -613,6 +632,18 @@ def _grown(mask: Bools, by: int) -> Bools:
         grown[k:] |= mask[:-k]
         grown[:-k] |= mask[k:]
     return grown
+
+
+def _gradual(values: Floats, chosen: Bools, scale: Floats) -> Bools:
+    """Stretches of chosen columns in and beside which values change by little from step to step."""
+    step = np.zeros(values.size)
+    step[3:-3] = np.abs(values[6:] - values[:-6])
+    begins = np.insert(chosen[1:] != chosen[:-1], 0, True)
+    first = np.flatnonzero(begins)
+    if first.size == 0:
+        return chosen
+    steep = np.maximum.reduceat(step / np.maximum(scale, 1e-3), first)
+    return np.asarray(chosen & (steep < 0.3)[np.cumsum(begins) - 1])
 
 
 def _run_so_far(mask: Bools) -> Ints:

@@ -61,14 +61,14 @@ class RuleSettings:
         "both", "which lines are taken", choices=("both", "horizontal", "vertical")
     )
     min_length: Length = setting(
-        Length(17, "mm"), "a straight line at least this long is a rule by itself"
+        Length(16, "mm"), "a straight line at least this long is a rule by itself"
     )
     max_thickness: Length = setting(Length(1.4, "mm"), "a thicker line is no rule")
     max_skew: float = setting(
         5.0, "degrees that rules may lean from the sides of the page", low=0, high=10
     )
     frames: bool = setting(
-        True, "take shorter lines where they close a box, hang on a rule as ticks or continue it"
+        True, "take shorter lines where they close a box or hang on a rule as ticks"
     )
 
 
@@ -221,7 +221,12 @@ class _Side:
             self.tracks.slope * self.mm / self.mm_across,
             self.tracks.thickness / 2 / self.mm_across,
             np.zeros(len(self.tracks)),
+            np.zeros(len(self.tracks)),
         )
+        looked_at = self.segments.length >= _SHORT_MM
+        self.in_thicket = np.zeros(len(self.tracks), bool)
+        self.in_thicket[looked_at] = hatched(self.segments.select(looked_at))
+        self.in_thicket &= self.segments.length < _LONG_MM
         self.accepted = np.zeros(len(self.tracks), bool)
         # measured lines, and which of them are rules
         self.found: list[tuple[Lines, Bools]] = []
@@ -263,6 +268,7 @@ class _Side:
             slope * self.mm / self.mm_across,
             (lines.high - lines.low) / 2 / self.mm_across,
             lines.peak,
+            lines.isolated(),
         )
 
     def extent(self, lines: Lines) -> Bools:
@@ -280,11 +286,14 @@ class _Side:
         tracks = lines.tracks
         length = tracks.length / self.mm
         _, slope, bend = lines.straightness()
-        is_rule = (lines.isolated() >= 0.28) & (tracks.covered >= 0.6 * tracks.length)
+        isolated, absent = lines.isolated(), lines.absent()
+        # letters in a row leave gaps; so does a worn rule, but that is long or stands alone
+        is_rule = (absent <= 0.15) & (isolated >= np.where(isolated * length > 12, 0.12, 0.2))
+        is_rule |= (absent <= 0.35) & (isolated >= 0.4) & (length > _LONG_MM)
         is_rule &= (lines.peak >= 0.03) & ~lines.dashed
         is_rule &= lines.high - lines.low <= 1.15 * self.max_thickness
         is_rule &= bend / self.mm_across <= np.minimum(0.16, 0.02 + 0.0012 * length)
-        is_rule &= lines.agreement(0.12 * self.mm_across) >= 0.75
+        is_rule &= lines.agreement(0.12 * self.mm_across) >= 0.85
         return is_rule & ((length > _LONG_MM) | (np.abs(slope - tracks.page_slope) < 0.02))
 
     def may_belong(self, lines: Lines) -> Bools:
@@ -342,14 +351,14 @@ def _accept_long(sides: tuple[_Side, ...]) -> None:
     """Find the lines that are rules by themselves."""
     for side in sides:
         length = side.segments.length
-        long = np.flatnonzero((length >= side.min_length) & (side.tracks.roughness < _STEADY))
-        in_thicket = hatched(side.segments.select(long), side.segments.select(length >= _SHORT_MM))
-        long = long[~in_thicket | (length[long] >= _LONG_MM)]
+        fits = (length >= side.min_length) & (side.tracks.roughness < _STEADY)
+        long = np.flatnonzero(fits & ~side.in_thicket)
         measured = [(chosen, lines) for chosen, lines in side.measure(long, _REACH_MM)]
         side.found = [(lines, side.stands_alone(lines)) for _, lines in measured]
         usual = _usual_thickness(side.found)
         for (chosen, lines), (_, is_rule) in zip(measured, side.found, strict=True):
-            is_rule &= (length[chosen] > _LONG_MM) | _is_usual(lines, usual)
+            alone = (length[chosen] > _LONG_MM) | (lines.isolated() > 0.6)
+            is_rule &= alone | _is_usual(lines, usual)
             side.accepted[chosen] = is_rule
 
 
@@ -362,7 +371,7 @@ def _accept_short(sides: tuple[_Side, ...]) -> None:
     chosen = []
     for side in sides:
         tracks, length = side.tracks, side.segments.length
-        fits = (length >= _SHORT_MM) & (length < _DOUBTFUL_MM)
+        fits = (length >= _SHORT_MM) & (length < _DOUBTFUL_MM) & ~side.in_thicket
         fits &= (tracks.roughness < _STEADY_SHORT) & (tracks.thickness <= usual + 4)
         fits &= np.abs(tracks.slope - tracks.page_slope) < 0.04
         chosen.append(np.flatnonzero(fits & ~side.accepted))

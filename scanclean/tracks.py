@@ -24,6 +24,7 @@ Ints = NDArray[np.int64]
 _PIECE_MM = 3.0  # the line-shaped element: letters of common sizes have no straight stroke as long
 _CELLS_PER_MM = 3.0
 _GAP_MM = 6.0
+_GAP_SHARE = 0.75  # of the shorter of two pieces
 _OVERLAP_MM = 3.0
 _LINK_MM, _LINK_PX, _LINK_DRIFT = 0.135, 1.2, 0.012
 
@@ -177,7 +178,8 @@ def find_tracks(
     step = np.abs(np.diff(darkness))
     beside = (knot_track[1:] == knot_track[:-1]) & (np.diff(knot_x) < 1.5 * cell)
     roughness = group_quantile(step[beside], knot_track[1:][beside], n)
-    roughness = np.nan_to_num(roughness / group_quantile(darkness, knot_track, n), nan=1.0)
+    usual_darkness = np.maximum(group_quantile(darkness, knot_track, n), 1.0)
+    roughness = np.nan_to_num(roughness / usual_darkness, nan=1.0)
     offset, slope = fit_lines(knot_x, knot_y, knot_track, n)
     owner = track[alive]
     first = np.full(n, page.shape[1])
@@ -233,7 +235,9 @@ def _link(
         np.abs(row_start[j] - row_stop[i] - lead[j] * gap),
     )
     close = max(_LINK_PX, _LINK_MM * mm_across) + _LINK_DRIFT * np.maximum(gap, 0)
-    met = miss < close
+    # short pieces bear only short gaps: ticks of two combs may stand in line
+    length = stop - start
+    met = (miss < close) & (gap <= _GAP_SHARE * np.minimum(length[i], length[j]))
     graph = csr_array(
         (np.ones(int(met.sum()), np.int8), (i[met], j[met])), shape=(start.size, start.size)
     )
