@@ -23,7 +23,7 @@ INK = 180.0
 _CELL = 4  # pixels of a cell of the reduced page
 _CLOSING_STROKES = 6.0  # what is narrower than this many strokes is closed over
 _LEAST_CLOSING = 28.0  # pixels
-_PAPER_BAND = (0.07, 0.15)  # share of the surface by which paper lies below and above it
+_BELOW = 0.04  # a cell darker than the surface by more than this share is no paper
 _SMOOTHING = 0.3  # standard deviation, share of the closing's width
 _ROUNDS = 4  # of lifting the surface off what is no paper
 _FEW = 0.05  # share of paper cells near by at which the closing has half the say
@@ -85,9 +85,9 @@ def close_paper(grey: NDArray[np.uint8], stroke_px: float) -> Surface:
     """Level of the paper, followed as closely as the strokes allow.
 
     1. Closing of the reduced page by a box some strokes wide.
-    2. Some rounds of: mean of the cells near the surface, weighted by a Gaussian. The closing
-       clings to the brightest grain and sinks under broad strokes; the mean does neither. Where
-       few cells are near, the closing stays.
+    2. Some rounds of: mean of the cells that are no darker than the surface, weighted by a
+       Gaussian. The closing clings to the brightest grain and sinks under broad strokes; the mean
+       does neither. Where few cells are bright enough, the closing stays.
 
     Parameters
     ----------
@@ -109,9 +109,8 @@ def close_paper(grey: NDArray[np.uint8], stroke_px: float) -> Surface:
     closing = _halved(closed.astype(np.float32))
     surface = closing
     level = closed.astype(np.float32)
-    below, above = _PAPER_BAND
     for _ in range(_ROUNDS):
-        is_paper = (cells > (1 - below) * level) & (cells < (1 + above) * level)
+        is_paper = cells > np.float32(1 - _BELOW) * level
         weight = _blurred(_halved(is_paper.astype(np.float32)), sigma)
         total = _blurred(_halved((is_paper * cells).astype(np.float32)), sigma)
         trust = weight / (weight + np.float32(_FEW))

@@ -39,7 +39,7 @@ CONTROLS = {
     "sauvola 41 px": ThresholdSettings(method="sauvola", window=Length(41, "px"), k=0.2),
 }
 CONSTANTS = {  # every constant of the way through hard pages, by module
-    "contrast": "_CLOSING_STROKES _LEAST_CLOSING _PAPER_BAND _SMOOTHING _FEW _GLARE _DARK_PAPER "
+    "contrast": "_CLOSING_STROKES _LEAST_CLOSING _BELOW _SMOOTHING _FEW _GLARE _DARK_PAPER "
     "_INK_QUANTILE",
     "outlines": "_STRONG_SLOPE WEAK_SLOPE",
     "relaxation": "_PAPER _PAPER_PULL _DATA _SOLID _FEWEST _FULL_OUTLINE",
