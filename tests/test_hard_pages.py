@@ -119,7 +119,8 @@ def test_the_level_of_outlines_is_half_of_the_strokes_near_by():
     # slanted strokes, as outlines lie anywhere between pixels; of contrast 180 on the left, of 90
     # on the right
     y, x = np.mgrid[:300, :400]
-    values = np.where((x + 0.13 * y) % 30 < 6, np.where(x < 200, 180, 90), 0)
+    cover = np.clip(3.5 - np.abs((x + 0.13 * y) % 30 - 15), 0, 1)
+    values = cover * np.where(x < 200, 180, 90)
     contrast = Contrast(blurred(values, 0.8), 6.0)
     level = outline_level(contrast, find_outlines(contrast)).rows(slice(None))
     assert np.median(level[100:200, 30:150]) == pytest.approx(90, rel=0.06)
