@@ -6,11 +6,14 @@ from itertools import pairwise
 
 import numpy as np
 import pytest
+from PIL import Image
+from scipy import ndimage
 from skimage import data, filters
 
 from scanclean.density import measure_tone
 from scanclean.threshold import METHODS, ThresholdSettings, darker, local_level, threshold
 from scanclean.units import Length, Resolution
+from tests.benchmarks import bench_threshold
 from tests.greys import bars
 
 DPI = Resolution(300, 300)
@@ -145,3 +148,48 @@ def test_what_threshold_refuses():
         threshold(page[1:], tone, ThresholdSettings(), DPI)
     with pytest.raises(ValueError, match="method must be one of adaptive"):
         threshold(page, tone, ThresholdSettings(method="guess"), DPI)
+
+
+@pytest.mark.parametrize("dpi", [72, 150, 300])
+def test_uneven_photograph_of_print(dpi):
+    # scikit-image's `page`, 191 x 384 px: print that falls into shadow at its lower left. Read by
+    # eye: "Region-based segmentation" has 23 letters, two i-dots and a hyphen, none touching;
+    # six lines of type begin at rows 13, 50, 68, 86, 104 and 121 and there is nothing but a faint
+    # rule between the last of the text and the line of code.
+    page = data.page()
+    ink = ink_of(page, Resolution(dpi, dpi))
+    heading = ndimage.label(ink[5:34], np.ones((3, 3)))[1]
+    assert heading == 26
+    assert not ink[34:49].any()
+    assert ink[138:166].sum() < 20
+    for row in (56, 74, 92, 110, 128):
+        assert 0.12 < ink[row - 4 : row + 4].mean() < 0.4
+
+
+@pytest.mark.parametrize("dpi", [72, 150, 300])
+def test_oblique_photograph_of_handwriting(dpi):
+    # scikit-image's `text`, 172 x 448 px: handwriting over ruled paper, soft blots between. Read
+    # by eye: blots at these points, and a long integral sign from (318, 72) to (424, 51)
+    page = data.text()
+    tone = measure_tone(page, resolution=Resolution(dpi, dpi))
+    found = threshold(page, tone, ThresholdSettings(), Resolution(dpi, dpi))
+    ink = (found.ink - found.shade).to_mask()
+    for x, y in ((235, 24), (367, 15), (419, 28)):
+        assert not ink[y - 4 : y + 5, x - 8 : x + 9].any()
+    labels, _ = ndimage.label(ink, np.ones((3, 3)))
+    ends = [
+        set(labels[y - 3 : y + 4, x - 3 : x + 4].ravel()) - {0} for x, y in ((318, 72), (424, 51))
+    ]
+    assert ends[0] & ends[1]
+
+
+def test_the_benchmark_compares_pages_with_their_truth(tmp_path, capsys):
+    page = bars(200, 160)
+    folder = tmp_path / "typed"
+    folder.mkdir()
+    Image.fromarray(page).save(folder / "one.png")
+    Image.fromarray(np.where(page == 40, 0, 255).astype(np.uint8)).save(folder / "one_gt.png")
+    bench_threshold.compare(tmp_path)
+    rows = capsys.readouterr().out.splitlines()
+    assert rows[1].split()[:2] == ["adaptive", "100.00"]
+    assert rows[-1] == "worst: typed/one 100.0"
