@@ -57,9 +57,7 @@ class Slices:
 
     def keep(self, chosen: Bools) -> Slices:
         """The chosen slices."""
-        return Slices(
-            self.component[chosen], self.x[chosen], self.top[chosen], self.bottom[chosen]
-        )
+        return Slices(self.component[chosen], self.x[chosen], self.top[chosen], self.bottom[chosen])
 
 
 def cut_slices(components: Components, shapes: Shapes, chosen: Bools, *, step: float) -> Slices:
@@ -128,7 +126,9 @@ class Baselines:
         # the tangent at the end, kept near the slope of the whole
         steepest = _END_SLOPE * half
         bend = (2 * a[2] + 4 * a[4]) * np.sign(t) + 3 * a[3]
-        return y + (a[1] + np.clip(bend, -steepest, steepest)) * (t - inside)
+        beyond: Floats = (a[1] + np.clip(bend, -steepest, steepest)) * (t - inside)
+        level: Floats = y + beyond
+        return level
 
     def keep(self, chosen: Bools | Ints) -> Baselines:
         """The chosen groups, by a mask or in an order."""
@@ -140,8 +140,20 @@ class Baselines:
             self.size[chosen],
         )
 
+    def with_groups(self, other: Baselines) -> Baselines:
+        """These groups and then others."""
+        return Baselines(
+            np.concatenate((self.left, other.left)),
+            np.concatenate((self.right, other.right)),
+            np.concatenate((self.coefficients, other.coefficients)),
+            np.concatenate((self.height, other.height)),
+            np.concatenate((self.size, other.size)),
+        )
 
-def fit_baselines(slices: Slices, group: Ints, n: int, *, scale: float) -> Baselines:
+
+def fit_baselines(
+    slices: Slices, group: Ints, n: int, *, scale: float, rough: bool = False
+) -> Baselines:
     """Robust curves through the slices' bottoms.
 
     Least squares first, of a straight line; then again with weights whose scale tightens: what
@@ -155,6 +167,8 @@ def fit_baselines(slices: Slices, group: Ints, n: int, *, scale: float) -> Basel
         G; every group has a slice.
     scale : float
         The page's x-height.
+    rough : bool
+        Fewer passes and parabolas at most: enough to tell what belongs together.
 
     References
     ----------
@@ -171,29 +185,40 @@ def fit_baselines(slices: Slices, group: Ints, n: int, *, scale: float) -> Basel
     half = np.maximum((right - left) / 2, 1.0)
     t = (x - (left + right)[group] / 2) / half[group]
     v = (y - level[group]) / unit[group]
-    powers = np.stack([t**k for k in range(2 * _DEGREE + 1)])
-    terms = np.arange(_DEGREE + 1)
+    degree = 2 if rough else _DEGREE
+    powers = _powers(t, 2 * degree)
+    terms = np.arange(degree + 1)
     hankel = terms[:, None] + terms
-    belief = _BELIEF / (half / unit)[:, None] ** (2 * terms)
+    belief = _BELIEF[: degree + 1] / (half / unit)[:, None] ** (2 * terms)
     straight = belief + np.where(terms > 1, 1e9, 0.0)
-    fit = np.zeros((n, _DEGREE + 1))
-    for near in (None, *_TIGHTENING):
+    fit = np.zeros((n, degree + 1))
+    for near in (None, *(_TIGHTENING[1::2] if rough else _TIGHTENING)):
         weight = np.ones_like(t)
         if near is not None:
-            residual = v - np.einsum("ku,uk->u", powers[: _DEGREE + 1], fit[group])
+            residual = v - np.einsum("ku,uk->u", powers[: degree + 1], fit[group])
             weight = 1 / (1 + (residual / near) ** 2) ** 2
         sums = np.stack([np.bincount(group, weight * power, n) for power in powers], axis=1)
         moment = np.stack(
-            [np.bincount(group, weight * v * power, n) for power in powers[: _DEGREE + 1]], axis=1
+            [np.bincount(group, weight * v * power, n) for power in powers[: degree + 1]], axis=1
         )
         normal = sums[:, hankel]
         normal[:, terms, terms] += straight if near is None else belief
         fit = np.linalg.solve(normal, moment[:, :, None])[:, :, 0]
-    coefficients = fit * unit[:, None]
+    coefficients = np.zeros((n, _DEGREE + 1))
+    coefficients[:, : degree + 1] = fit * unit[:, None]
     coefficients[:, 0] += level
     lines = Baselines(left, right, coefficients, unit, np.bincount(group, minlength=n))
     height = grouped_median(group, n, lines.at(group, x) - slices.top, scale)
     return Baselines(left, right, coefficients, np.maximum(height, 1.0), lines.size)
+
+
+def _powers(t: Floats, highest: int) -> Floats:
+    """(highest + 1, U) the powers of t from 0."""
+    powers = np.empty((highest + 1, t.size))
+    powers[0] = 1
+    for k in range(highest):
+        np.multiply(powers[k], t, out=powers[k + 1])
+    return powers
 
 
 def line_x_heights(slices: Slices, group: Ints, lines: Baselines) -> Floats:
@@ -203,11 +228,15 @@ def line_x_heights(slices: Slices, group: Ints, lines: Baselines) -> Floats:
     """
     n = lines.n
     over = lines.at(group, slices.x) - slices.top
-    bins = ((over / lines.height[group] - _LOWEST) * (_BINS / (_HIGHEST - _LOWEST))).astype(np.int64)
+    bins = ((over / lines.height[group] - _LOWEST) * (_BINS / (_HIGHEST - _LOWEST))).astype(
+        np.int64
+    )
     seen = (bins >= 0) & (bins < _BINS)
     count = np.bincount(group[seen] * _BINS + bins[seen], minlength=n * _BINS).reshape(n, _BINS)
     padded = np.pad(count, ((0, 0), (2, 2)))
-    smooth = sum(w * padded[:, k : k + _BINS] for k, w in enumerate((1, 2, 3, 2, 1)))
+    smooth = np.zeros((n, _BINS))
+    for k, weight in enumerate((1, 2, 3, 2, 1)):
+        smooth += weight * padded[:, k : k + _BINS]
     peak = np.zeros((n, _BINS), bool)
     peak[:, 1:-1] = (smooth[:, 1:-1] >= smooth[:, :-2]) & (smooth[:, 1:-1] >= smooth[:, 2:])
     peak &= smooth >= _STRONG * smooth.max(axis=1, keepdims=True)

@@ -37,7 +37,8 @@ def is_lump(components: Components, shapes: Shapes, measures: TextMeasures) -> B
     filled = area >= 0.5 * width * height
     whole = (components.n_runs <= 1.25 * height) & (components.holes == 0)
     stroke = measures.stroke_px * shapes.frame.aspect
-    return filled & whole & (thick >= _LUMP_OF_STROKE * stroke)
+    lumps: Bools = filled & whole & (thick >= _LUMP_OF_STROKE * stroke)
+    return lumps
 
 
 def is_hair(components: Components, shapes: Shapes, measures: TextMeasures) -> Bools:

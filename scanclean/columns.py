@@ -65,8 +65,15 @@ class Gaps:
 
     def keep(self, chosen: Bools) -> Gaps:
         """The chosen gaps."""
-        columns = (self.before, self.after, self.left, self.right, self.y, self.offset, self.height)
-        return Gaps(*(column[chosen] for column in columns))
+        return Gaps(
+            self.before[chosen],
+            self.after[chosen],
+            self.left[chosen],
+            self.right[chosen],
+            self.y[chosen],
+            self.offset[chosen],
+            self.height[chosen],
+        )
 
 
 class Occupied:

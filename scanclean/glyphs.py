@@ -18,10 +18,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.labels import Components
+from scanclean.lineset import LineSet
 from scanclean.neighbours import chains, keyed_best, keyed_neighbours, repeat_range
 from scanclean.places import Places, find_places
 from scanclean.slant import line_slants
-from scanclean.textlines import LineSet
 from scanclean.textmeasure import Spread, measure_spread
 from scanclean.upright import place
 
@@ -59,9 +59,7 @@ class Parts:
     n: int
 
 
-def join_parts(
-    components: Components, lines: LineSet, *, spread: Spread | None = None
-) -> Parts:
+def join_parts(components: Components, lines: LineSet, *, spread: Spread | None = None) -> Parts:
     """Join components to glyphs.
 
     Parameters
@@ -77,9 +75,9 @@ def join_parts(
     places = find_places(lines, shapes)
     slants = line_slants(components, lines, places.line)
     leaning = (places.line >= 0) & (np.append(slants, 0.0)[places.line] != 0)
-    left, right = upright_extents(components, lines, places, slants, leaning)
+    begins, ends = upright_extents(components, lines, places, slants, leaning)
     hanging = (places.line >= 0) & (places.bottom < -0.2) & (places.top > 0.3)
-    places = replace(places, left=left, right=right)
+    places = replace(places, left=begins, right=ends)
     reach = upright_extents(components, lines, places, slants, hanging, lowest=_FOOT)
     holes = components.holes
     marks, hosts = _marks_and_letters(places)
@@ -133,7 +131,7 @@ def upright_extents(
     owner = label[mine]
     frame, line = lines.frame, places.line[owner]
     x_height = lines.x_height[line]
-    y = runs.row[mine] + 0.5
+    y = runs.row[mine].astype(np.float64) + 0.5
     ends = [frame.upright(x[mine].astype(np.float64), y) for x in (runs.start, runs.stop)]
     # the baseline is level under one component
     box = components.box.astype(np.float64)
@@ -186,9 +184,7 @@ def _marks_and_letters(places: Places) -> tuple[Ints, Ints]:
     return mark[best], body[best]
 
 
-def _stacked(
-    places: Places, i: Ints, j: Ints, area: Ints, hosted: Bools
-) -> tuple[Ints, Ints]:
+def _stacked(places: Places, i: Ints, j: Ints, area: Ints, hosted: Bools) -> tuple[Ints, Ints]:
     """Upper and lower components that make one character, marks over letters aside."""
     level = (places.top + places.bottom) / 2
     swap = level[i] < level[j]
@@ -281,9 +277,7 @@ def _closest(left: Ints, right: Ints, gap: Floats) -> tuple[Ints, Ints]:
     return left[free], right[free]
 
 
-def _broken_off(
-    components: Components, places: Places, asked: Ints
-) -> tuple[Ints, Ints]:
+def _broken_off(components: Components, places: Places, asked: Ints) -> tuple[Ints, Ints]:
     """Pieces broken off letters, and the letter that each belongs to.
 
     A piece lies against its letter, as close as a worn stroke breaks, and does not make it wider

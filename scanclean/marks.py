@@ -192,7 +192,7 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
 
 
 def _have_mates(places: Places, asked: Ints, among: Bools, area: Floats, *, over: bool) -> Bools:
-    """(M,) which small components have one like them over or under them, as in a colon, or beside."""
+    """(M,) which small components have one like them over or under them (a colon), or beside."""
     found = np.zeros(asked.size, bool)
     for mate in keyed_neighbours(places.line, places.middle, asked[among], asked, 2):
         other = np.maximum(mate, 0)

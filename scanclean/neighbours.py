@@ -12,7 +12,15 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["beside", "best_of_both", "chains", "grouped_median", "keyed_best", "repeat_range", "weighted_median"]
+__all__ = [
+    "beside",
+    "best_of_both",
+    "chains",
+    "grouped_median",
+    "keyed_best",
+    "repeat_range",
+    "weighted_median",
+]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -48,7 +56,9 @@ def beside(order: Floats, top: Floats, bottom: Floats, *, band: float) -> tuple[
         return entry, entry
     level -= level.min()
     # a stable sort keeps the order within each band; 16 bits sort by radix
-    by_level = np.argsort(level.astype(np.uint16 if level.max() < 1 << 16 else np.int64), kind="stable")
+    by_level = np.argsort(
+        level.astype(np.uint16 if level.max() < 1 << 16 else np.int64), kind="stable"
+    )
     level, entry = level[by_level], entry[by_level]
     same = level[1:] == level[:-1]
     pair = np.unique(entry[:-1][same] * n + entry[1:][same])

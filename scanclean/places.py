@@ -14,8 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scanclean.lineset import LineSet
 from scanclean.neighbours import keyed_neighbours
-from scanclean.textlines import LineSet
 from scanclean.upright import Shapes
 
 __all__ = ["Places", "find_places"]

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.labels import Components
-from scanclean.textlines import LineSet
+from scanclean.lineset import LineSet
 
 __all__ = ["line_slants"]
 
@@ -53,7 +53,7 @@ def line_slants(components: Components, lines: LineSet, line: Ints) -> Floats:
     on_line = on_line[:: max(1, on_line.size // _SAMPLE)]
     mine = line[label[on_line]]
     middle = (runs.start[on_line] + runs.stop[on_line]) / 2
-    x, y = lines.frame.upright(middle, runs.row[on_line] + 0.5)
+    x, y = lines.frame.upright(middle, runs.row[on_line].astype(np.float64) + 0.5)
     over = lines.baselines.at(mine, x) - y
     column = max(1.0, usual * lines.frame.aspect / 2)
     x = (x - x.min()) / column + 2 * abs(_TRIALS).max() * lines.x_height.max() * 4 / column

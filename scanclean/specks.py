@@ -17,10 +17,10 @@ from numpy.typing import NDArray
 
 from scanclean.clutter import is_hair, is_lump
 from scanclean.labels import Components
+from scanclean.lineset import LineSet
 from scanclean.marks import are_marks, measure_dots
 from scanclean.places import find_places
 from scanclean.settings import setting
-from scanclean.textlines import LineSet
 from scanclean.textmeasure import Spread, TextMeasures, measure_spread
 from scanclean.units import MM_PER_INCH, Length, Resolution
 from scanclean.upright import Shapes, place
@@ -43,7 +43,9 @@ class SpeckSettings:
 
     enabled: bool = setting(True, "take specks out")
     size: Length | None = setting(
-        None, "whatever is smaller goes, wherever it stands; auto: by the type's own dots", auto=True
+        None,
+        "whatever is smaller goes, wherever it stands; auto: by the type's own dots",
+        auto=True,
     )
     place: bool = setting(True, "judge small pieces by where they stand in the text lines")
 
