@@ -21,8 +21,8 @@ files pagewrite pageio
 blocks smoothing density contrast outlines shade solids relaxation threshold
 skew edges
 tracks profiles crossings removal frames ruling
-textmeasure upright neighbours clutter baselines columns textlines places marks slant specks glyphs
-reading
+textmeasure upright clutter neighbours baselines columns lineset pieces textlines
+places marks specks slant glyphs words reading
 holes ledger layout steps recipe clean
 sources runlog work pool batch
 score cli
