@@ -149,6 +149,7 @@ def test_ink_does_not_depend_on_how_the_page_is_cut_into_tiles(monkeypatch):
     page = blurred(bars(300, 500, paper=210, ink=90), 1.0, noise=8)
     _, _, ink = hard(page)
     monkeypatch.setattr("scanclean.relaxation._TILE", (17, 40))
+    monkeypatch.setattr("scanclean.outlines._STRIP", 500 * 9)
     _, _, in_small_tiles = hard(page)
     assert (ink == in_small_tiles).all()
 
