@@ -24,7 +24,7 @@ Ints = NDArray[np.int64]
 _PIECE_MM = 3.0  # the line-shaped element: letters of common sizes have no straight stroke as long
 _CELLS_PER_MM = 3.0
 _GAP_MM = 6.0
-_GAP_SHARE = 0.75  # of the shorter of two pieces
+_GAP_SHARE = 0.45  # of the shorter of two pieces
 _OVERLAP_MM = 3.0
 _LINK_MM, _LINK_PX, _LINK_DRIFT = 0.135, 1.2, 0.012
 
