@@ -26,12 +26,15 @@ Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
 _TIGHTENING = (0.6, 0.35, 0.2, 0.12)  # of the letters' height: what counts as near, pass by pass
-# How firmly it is believed beforehand that a group runs straight along the page, against letters
-# that stand true to a tenth of their height: its slope is under 0.02, and the higher terms add up
-# to half a height at 50 heights from its middle. A word cannot tell its own slope; a whole line
-# can, and its bends too.
+# What a group's curve is believed to be beforehand, against letters that stand true to a tenth of
+# their height: at `_BELIEVED_AT` heights from its middle the slope has made a height, each higher
+# term half of one, and nearer by these powers of the distance. A word cannot tell its own slope; a
+# whole line can, and its bends too.
 _DEGREE = 4
-_BELIEF = (0.1 / np.array([3.0, 0.02, 0.5 / 50**2, 0.5 / 50**3, 0.5 / 50**4])) ** 2
+_TRUE = 0.1
+_BELIEVED_AT = 50.0
+_BELIEVED = np.array([3.0, 1.0, 0.5, 0.5, 0.5])
+_BELIEVED_POWER = np.array([0.0, 1.0, 1.3, 1.6, 2.0])
 _END_SLOPE = 0.05  # a line runs on beyond its end at most so much steeper than its whole
 _BINS = 60
 _LOWEST, _HIGHEST = 0.3, 3.3  # heights looked at, of the group's median height
@@ -189,7 +192,8 @@ def fit_baselines(
     powers = _powers(t, 2 * degree)
     terms = np.arange(degree + 1)
     hankel = terms[:, None] + terms
-    belief = _BELIEF[: degree + 1] / (half / unit)[:, None] ** (2 * terms)
+    far = (half / unit / _BELIEVED_AT)[:, None]
+    belief = (_TRUE / (_BELIEVED[terms] * far ** _BELIEVED_POWER[terms])) ** 2
     straight = belief + np.where(terms > 1, 1e9, 0.0)
     fit = np.zeros((n, degree + 1))
     for near in (None, *(_TIGHTENING[1::2] if rough else _TIGHTENING)):

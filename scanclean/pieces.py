@@ -200,17 +200,20 @@ class Joining:
     def _gaps(self, pieces: Pieces, *, across_columns: bool) -> Gaps:
         """Gaps between pieces that would make one line of both."""
         n, lines = self.n, pieces.baselines
-        # Pieces are ordered by the centres of their first and last letters: in slanted writing
-        # the boxes of neighbours overlap.
+        # Pieces are ordered by the centres of their first and last letters, and a little within:
+        # in slanted writing the boxes of neighbours overlap, and of a colon one dot may have gone to
+        # each of two pieces.
         first, last = np.full(n, np.inf), np.full(n, -np.inf)
         np.minimum.at(first, self.piece, self.shapes.x[self.letters])
         np.maximum.at(last, self.piece, self.shapes.x[self.letters])
         every = np.arange(n)
         bottom = np.concatenate((lines.at(every, first), lines.at(every, last)))
         top = bottom - np.tile(lines.height, 2)
+        within = np.minimum(0.5 * lines.height, 0.4 * (last - first))
+        ends = np.concatenate((first + within, last - within))
         # a piece of one letter has both ends in one place: the left one comes first
         order = np.empty(2 * n)
-        order[np.lexsort((np.repeat((0, 1), n), np.concatenate((first, last))))] = np.arange(2 * n)
+        order[np.lexsort((np.repeat((0, 1), n), ends))] = np.arange(2 * n)
         i, j = beside(order, top, bottom, band=_BAND * self.x_height)
         facing = (i >= n) & (j < n) & (i - n != j)
         i, j = i[facing] - n, j[facing]

@@ -34,6 +34,7 @@ _USUAL_DPI = (72, 96, 100, 150, 200, 240, 300, 400, 600, 1200)
 _LEAST_LETTER_MM = 0.6  # half the x-height of 8 pt type, under that of 6 pt
 _LEAST_LETTER_PX = 4.0  # no letter can be told by fewer rows
 _MOST_LETTER_MM = 25.0  # letters of posters; beyond it stand pictures and frames
+_SAMPLE = 4000  # runs looked at for strokes that lie level
 _BAR = 0.25  # what an upright bar counts among letters
 _BINS_PER_OCTAVE = 12
 
@@ -143,9 +144,7 @@ def measure_text(
         return TextMeasures(0.0, 0.0)
     x_height = _mode(size[letters], weights=weight[letters])
     near = letters & (size > 0.5 * x_height) & (size < 3 * x_height)
-    lengths = components.runs.length[near[components.run_label]]
-    lengths = lengths[lengths < 3 * x_height]  # bars along the text say nothing of its strokes
-    stroke = _median_of_counts(np.bincount(lengths)) if lengths.size else 0.0
+    stroke = _stroke_width(components, near, x_height)
     return TextMeasures(stroke, float(x_height), int(near.sum()))
 
 
@@ -184,6 +183,35 @@ def _letter_like(components: Components, size: Floats, resolution: Resolution | 
     upright = (height >= 2 * width) & (height >= 2 * least)
     weight = np.where(several_strokes, 1.0, np.where(upright, _BAR, 0.0))
     return np.where((size >= least) & (size <= most), weight, 0.0)
+
+
+def _stroke_width(components: Components, letters: Bools, x_height: float) -> float:
+    """Usual width of the letters' strokes, the smaller of across and down.
+
+    Across it is the median run. Down it is the mean one, on a sample: a mean is larger, and so it
+    counts on writing of level or flat strokes only.
+    """
+    runs = components.runs
+    mine = np.flatnonzero(letters[components.run_label])
+    lengths = runs.length[mine]
+    lengths = lengths[lengths < 3 * x_height]  # bars along the text say nothing of its strokes
+    if lengths.size == 0:
+        return 0.0
+    across = _median_of_counts(np.bincount(lengths))
+    sample = mine[:: max(1, mine.size // _SAMPLE)]
+    start, stop = runs.bounds[0::2], runs.bounds[1::2]
+    ink = np.concatenate(([0], np.cumsum(stop - start)))
+    below = runs.shape[1] + 1
+
+    def inked_before(position: NDArray[np.int64]) -> NDArray[np.int64]:
+        i = np.searchsorted(start, position, side="right") - 1
+        part = np.minimum(position, stop[np.maximum(i, 0)]) - start[np.maximum(i, 0)]
+        return np.where(i >= 0, ink[np.maximum(i, 0)] + part, 0)
+
+    area = int((stop - start)[sample].sum())
+    goes_on = inked_before(stop[sample] + below) - inked_before(start[sample] + below)
+    down = area / max(1, area - int(goes_on.sum()))
+    return min(across, down)
 
 
 def _mode(values: Floats, *, weights: Floats) -> float:
