@@ -253,4 +253,7 @@ def _are_columns(
     offset = gaps.offset / gaps.height
     drift = float(np.median(offset))  # on a curled page all rows are out of step alike
     in_step = np.count_nonzero(np.abs(offset - drift) <= 0.2)
-    return bool(in_step < 0.7 * (offset.size + alone) or abs(drift) > 0.5)
+    # a hand is uneven in the cells of a form; beside running text, that is the way of notes
+    least = offset.size if running else 0.7 * offset.size
+    in_rows = offset.size >= 0.7 * (offset.size + alone) and in_step >= 0.7 * least
+    return bool(not in_rows or abs(drift) > 0.5)
