@@ -139,12 +139,13 @@ class _Pool(Generic[T]):
 
     def __exit__(self, kind: type[BaseException] | None, *_: object) -> None:
         if kind is not None:  # nobody waits for what is in hand
-            mine = set(multiprocessing.active_children()) - self._others
             self._executor.shutdown(wait=False, cancel_futures=True)
-            for process in mine:
-                process.terminate()
-            for process in mine:
-                process.join()
+            # an interrupt may have come between two starts: look until none is left
+            while mine := set(multiprocessing.active_children()) - self._others:
+                for process in mine:
+                    process.terminate()
+                for process in mine:
+                    process.join()
         self._executor.shutdown(wait=True)
 
     def submit(self, job: Job[T]) -> Future[T]:
