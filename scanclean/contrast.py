@@ -28,7 +28,7 @@ _SMOOTHING = 0.3  # standard deviation, share of the closing's width
 _ROUNDS = 4  # of lifting the surface off what is no paper
 _FEW = 0.05  # share of paper cells near by at which the closing has half the say
 _GLARE = 4.0  # grey levels; keeps the contrast of nearly black paper finite
-_DARK_PAPER = 0.7  # paper under this share of the page's bright paper counts in proportion
+_DARK_PAPER = (0.25, 0.5)  # of the page's bright paper: what is darker does not count, or less
 _INK_QUANTILE = 0.75  # of the darker class
 _LEAST_INK = 0.08  # contrast under which nothing is called ink
 
@@ -52,7 +52,8 @@ class Contrast:
 def measure_contrast(grey: NDArray[np.uint8], stroke_px: float) -> Contrast:
     """Measure the contrast ``1 - page / paper`` of a dark-on-light page, scaled by its ink's.
 
-    Bindings, tables and burnt edges are much darker than the page; what lies on them counts less.
+    Bindings, tables and burnt edges are much darker than the page; what lies on them does not
+    count.
 
     Parameters
     ----------
@@ -64,8 +65,10 @@ def measure_contrast(grey: NDArray[np.uint8], stroke_px: float) -> Contrast:
     Contrast
     """
     paper = close_paper(grey, stroke_px)
-    bright = _DARK_PAPER * float(np.quantile(paper.grid, 0.8))
-    gain = np.minimum(1.0, paper.grid / bright) / (paper.grid + _GLARE)
+    none, full = _DARK_PAPER
+    bright = float(np.quantile(paper.grid, 0.8))
+    counts = np.clip((paper.grid / bright - none) / (full - none), 0.0, 1.0)
+    gain = counts / (paper.grid + _GLARE)
     scale = Surface(gain.astype(np.float32), paper.size, paper.shape)
     # one row of each row of blocks tells how dark the ink is
     sample = slice(min(paper.size // 2, len(grey) // 2), None, paper.size)
