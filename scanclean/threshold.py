@@ -46,6 +46,7 @@ _THIN_PX = 2.5  # strokes whose outlines run into each other: nothing to go by f
 _NOISY = 0.035  # noise of the paper as a share of the ink's darkness
 _DARK = 0.6  # darkness under which ink has faded
 _CRISP = 0.7  # sharpness that makes up for it
+_DARK_AND_CRISP = 1.13  # small type loses darkness to blur, faded ink both
 _FAINT = 0.7
 _SOFT = 0.02
 
@@ -242,7 +243,11 @@ def is_clean(tone: Tone) -> bool:
         return True
     return (
         tone.noise <= _NOISY * tone.ink_darkness
-        and (tone.ink_darkness >= _DARK or tone.sharpness >= _CRISP)
+        and (
+            tone.ink_darkness >= _DARK
+            or tone.sharpness >= _CRISP
+            or tone.ink_darkness + tone.sharpness >= _DARK_AND_CRISP
+        )
         and tone.faint <= _FAINT
         and tone.soft <= _SOFT
     )
