@@ -233,7 +233,7 @@ def _stroke_width(ink: RunSet) -> float:
 def _likely_resolution(shape: tuple[int, int]) -> Resolution:
     """The resolution of the page if it were A4; to begin with, where the file states none."""
     low, high = _LIKELY_DPI
-    dpi = min(max(max(shape) / _A4_LONG_SIDE, low), high)
+    dpi = float(round(min(max(max(shape) / _A4_LONG_SIDE, low), high)))
     return Resolution(dpi, dpi)
 
 

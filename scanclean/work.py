@@ -7,7 +7,7 @@ called before it starts, and it names all settings that decide what is in them.
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Protocol
@@ -166,12 +166,7 @@ class CleanWork:
         }
         if self.crops:
             written[".glyphs/"] = _write_crops(page, Path(stem + ".glyphs"))
-        notes: tuple[str, ...] = ()
-        if page.dpi_estimated:
-            notes = (
-                f"no resolution in the file and no --dpi: {page.resolution.x:g} dpi estimated",
-            )
-        return Done(written, page.flags, notes)
+        return Done(written, page.flags, tuple(_notes(page)))
 
 
 @dataclass(frozen=True)
@@ -257,6 +252,17 @@ def page_layout(page: CleanPage, source: Source) -> Layout:
             "thickness_px": np.array([rule.thickness_px for rule in page.rules], float),
         },
     )
+
+
+def _notes(page: CleanPage) -> Iterator[str]:
+    """What the user should know of a page, though it is done."""
+    if "blank" in page.flags:
+        yield "no ink found: blank, black all over or nothing but noise; look at the scan"
+    if page.dpi_estimated:
+        yield (
+            "no resolution in the file that can be believed, and no --dpi: "
+            f"{page.resolution.x:g} dpi estimated"
+        )
 
 
 def _write_crops(page: CleanPage, folder: Path) -> Written:

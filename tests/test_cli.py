@@ -300,7 +300,7 @@ def test_a_resolution_that_is_not_stated_is_given_or_estimated(here):
     done = scanclean("clean", "scan.png", "-o", "estimated")
     assert done.returncode == 0
     assert re.search(
-        r"^scanclean: scan.png: no resolution in the file and no --dpi: [0-9.]+ dpi estimated$",
+        r"^scanclean: scan.png: no resolution in the file .*, and no --dpi: [0-9.]+ dpi estimated$",
         done.err,
         re.MULTILINE,
     )
@@ -490,6 +490,8 @@ def test_an_odd_scan_is_cleaned(hospital, name):
     layout = check_page(home / "out", stem_of(name))
     if "white" in name or "clear" in name:
         assert not ink_of(home / "out" / f"{stem_of(name)}.tif").any()
+        assert "blank" in layout["flags"]
+        assert f"{stem_of(name)}.png: no ink found" in done.err
     if "no-dpi" in name or "absurd" in name:
         assert "dpi-estimated" in layout["flags"]
         assert f"{stem_of(name)}.png: no resolution in the file" in done.err
