@@ -21,7 +21,10 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
-_REACH = 2.0  # in x-heights: so far beyond its ends a line still claims marks
+# in x-heights
+_REACH = 2.0  # so far beyond its ends a line still claims marks
+_REACH_OF_STOPS = 4.0  # and stops on its baseline
+_LARGEST = 6.0  # height of what can stand in a line
 _KEY = 1e7  # more than any page is high
 
 
@@ -101,10 +104,14 @@ class LineSet:
             mine = line[some]
             x_height = self.x_height[mine]
             level = self.levels(mine, shapes.x[some], shapes.y[some])
-            inside = (level > -1.2) & (level < 3.0) & (shapes.core[some] < 6 * x_height)
-            inside &= shapes.right[some] > self.left[mine] - _REACH * x_height
-            inside &= shapes.left[some] < self.right[mine] + _REACH * x_height
-            cost = np.maximum(level - 1, 0) + 1.8 * np.maximum(-level, 0) + 0.1 * abs(level - 0.5)
+            # how far it stands off the line's ends
+            off = np.maximum(self.left[mine] - shapes.right[some], 0)
+            off = np.maximum(off, shapes.left[some] - self.right[mine]) / x_height
+            reach = np.where(np.abs(level - 0.2) < 0.4, _REACH_OF_STOPS, _REACH)
+            inside = (level > -1.2) & (level < 3.0) & (off < reach)
+            inside &= shapes.core[some] < _LARGEST * x_height
+            cost = np.maximum(level - 1, 0) + 1.8 * np.maximum(-level, 0) + 0.3 * off
+            cost += 0.1 * np.abs(level - 0.5)
             better = inside & (cost < least[some])
             best[some[better]] = mine[better]
             least[some[better]] = cost[better]
@@ -124,7 +131,8 @@ class LineSet:
     def _strips(self) -> tuple[Floats, Ints, Ints, float, float]:
         """Baselines where they cross upright strips of the page, sorted by strip and level."""
         width = 2 * float(np.median(self.x_height))
-        start, stop = self.left - _REACH * self.x_height, self.right + _REACH * self.x_height
+        reach = _REACH_OF_STOPS * self.x_height
+        start, stop = self.left - reach, self.right + reach
         first = float(start.min())
         line, strip = repeat_range(
             np.floor((start - first) / width).astype(np.int64),

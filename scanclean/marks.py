@@ -171,7 +171,7 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
     else:
         dot_like, at_dots = enough, np.ones(asked.size, bool)
 
-    near = (here.before < 1.8) | (here.behind < 1.2)
+    near = (here.before < 1.8) | (here.behind < 1.2) | _in_row(places, asked, enough, area)
     hangs = (bottom > -0.85) & (bottom < 0.3) & (top > -0.15) & (top < 0.7)
     stop = hangs & near & ~here.within
     stop &= ~is_round | ((size > 0.5) & (size < 6) & (bottom > -0.4))
@@ -189,6 +189,19 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
     high = here.over | ((top > 0.95) & (top < 2.3) & (bottom > 0.45) & (gap < 2.0))
     twin = high & enough & _have_mates(places, asked, enough & high, area, over=False)
     return placed | twin | (enough & _have_mates(places, asked, placed, area, over=True))
+
+
+def _in_row(places: Places, asked: Ints, among: Bools, area: Floats) -> Bools:
+    """(M,) which small components are one of three alike in a row, as of an ellipsis or leaders."""
+    count = np.zeros(asked.size, np.int64)
+    for mate in keyed_neighbours(places.line, places.middle, asked[among], asked, 2):
+        other = np.maximum(mate, 0)
+        most = 1.6 * np.minimum(area[other], area[asked])
+        alike = (mate >= 0) & (np.maximum(area[other], area[asked]) < most)
+        alike &= np.abs(places.bottom[other] - places.bottom[asked]) < 0.1
+        count += alike & (np.abs(places.middle[other] - places.middle[asked]) < 2.5)
+    row: Bools = count >= 2
+    return row
 
 
 def _have_mates(places: Places, asked: Ints, among: Bools, area: Floats, *, over: bool) -> Bools:

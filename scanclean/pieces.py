@@ -263,6 +263,7 @@ class Joining:
         """(S,) which pieces are marks of a longer line, or a few odd letters of it."""
         lines, size, mine = self._lines(), self._size, self.piece
         x, y, high = self.shapes.middle[self.letters], self.level, self.core
+        begin, end = self.shapes.left[self.letters], self.shapes.right[self.letters]
         guest = np.zeros(x.size, bool)
         # three and more letters with some structure are writing, however small beside the host
         marks = ((size <= 2) | (np.bincount(mine, self.plain, self.n) > 0.5 * size))[mine]
@@ -271,7 +272,11 @@ class Joining:
             x_height = lines.x_height[host]
             level, half = lines.levels(host, x, y), high / x_height / 2
             inside = (line >= 0) & (host != mine) & (size[host] >= np.maximum(4, 2 * size[mine]))
-            inside &= (half < 2.5) & lines.reaches(host, x)
+            # What is grown together from two lines by a hair or a tail is no line; an initial that
+            # stands before lines and reaches down over the next is one of its own.
+            across = (begin < lines.right[host]) & (end > lines.left[host])
+            near = across | (lines.reaches(host, x) & (level - half > -0.9))
+            inside &= np.where(half < 2.5, near, across & (half < 5))
             few = size[mine] <= 4
             crossing = few & (level + half > 0.1) & (level - half < 0.9)
             small = marks & (half < 0.4) & (level > -1.0) & (level < 2.8)
