@@ -24,6 +24,8 @@ __all__ = ["EdgeSettings", "find_edges"]
 
 _CELL_MM = 0.5
 _DARK = 0.5  # of the paper's own level; scanner beds and lids are darker, stained paper is not
+_BLACK = 0.2  # darker than this no text can be read; above it, a shadow may lie over text
+_SOLID = 0.5  # share of a margin's cell that is ink; of a line of text it is less
 _PAPER_QUANTILE = 0.85
 _BODY_CELLS = 3  # a margin is at least 1.5 mm thick, counting what the page's border cut off
 _ALONG_MM = 8.0  # a margin follows the border so far; a letter cut by it does not
@@ -66,7 +68,7 @@ def find_edges(
     if not settings.enabled or not ink:
         return RunSet.empty(ink.shape)
     source = np.where(ink.to_mask(), np.uint8(0), np.uint8(255)) if grey is None else grey
-    margin = _dark_margin(source, resolution, settings)
+    margin = _dark_margin(ink, source, resolution, settings)
     found = ink & margin
     if margin:
         # grains and lumps that lie mostly in the margin's soft outline belong to it
@@ -76,15 +78,20 @@ def find_edges(
     return found | _along_sides(ink - found, resolution, settings)
 
 
-def _dark_margin(grey: NDArray[np.uint8], resolution: Resolution, settings: EdgeSettings) -> RunSet:
+def _dark_margin(
+    ink: RunSet, grey: NDArray[np.uint8], resolution: Resolution, settings: EdgeSettings
+) -> RunSet:
     """Thick dark regions along the border, as a set at full resolution."""
     height, width = grey.shape
     cell_x, cell_y = _cell(resolution)
     cells = np.asarray(Image.fromarray(grey).reduce((cell_x, cell_y)))
-    dark = RunSet.from_mask(cells < _DARK * np.quantile(cells, _PAPER_QUANTILE))
+    paper = np.quantile(cells, _PAPER_QUANTILE)
+    dark = RunSet.from_mask(cells < _DARK * paper)
     rim = _rim(dark.shape, 1)
     if not dark & rim:
         return RunSet.empty(grey.shape)
+    share = Image.fromarray(ink.to_mask().astype(np.uint8) * 255).reduce((cell_x, cell_y))
+    dark &= RunSet.from_mask((cells < _BLACK * paper) | (np.asarray(share) >= 255 * _SOLID))
     outside = _BODY_CELLS
     page = pad(dark, outside, outside, outside, outside)
     frame = _rim(page.shape, outside)

@@ -109,3 +109,15 @@ def test_tiny_pages(shape, level):
     grey = np.full(shape, level, np.uint8)
     ink = RunSet.from_mask(grey < 128)
     assert edges(grey, ink) <= ink
+
+
+def test_text_in_a_deep_shadow_at_the_border_stays():
+    def draw(grey):
+        grey[:, :200] = 90  # two fifths of the paper's light
+        for top in range(100, 1000, 40):
+            text(grey, left=20, top=top)
+        grey[grey == 30] = 10
+
+    grey, _ = page_with(draw)
+    ink = RunSet.from_mask(grey < 40)
+    assert not edges(grey, ink)
