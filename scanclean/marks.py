@@ -173,8 +173,7 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
 
     near = (here.before < 1.8) | (here.behind < 1.2) | _in_row(places, asked, enough, area)
     hangs = (bottom > -0.85) & (bottom < 0.3) & (top > -0.15) & (top < 0.7)
-    stop = hangs & near & ~here.within
-    stop &= ~is_round | ((size > 0.5) & (size < 6) & (bottom > -0.4))
+    stop = hangs & ~here.within & (~is_round | ((size > 0.5) & (size < 6) & (bottom > -0.4)))
     quote = (top > 0.95) & (top < 2.3) & (bottom > 0.45) & (gap < 2.0) & (size > 0.6)
     between = (here.before < 0.5) & (here.behind < 0.5) & (size > 0.9)
     quote &= ~is_round | (size > 1.5) | between
@@ -185,10 +184,18 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
     dot |= is_round & dot_like & at_dots & (here.over | (gap < 0.0)) & dots.measured
     # an accent is no smaller than a dot, unless it is one of two
     accent = here.over & (size > 0.75) & (~is_round | (dot_like & at_dots))
-    placed = enough & (stop | quote | dash | centred | dot | accent | here.under)
+    placed = enough & ((stop & near) | quote | dash | centred | dot | accent | here.under)
     high = here.over | ((top > 0.95) & (top < 2.3) & (bottom > 0.45) & (gap < 2.0))
+    placed |= enough & stop & _after_another(places, asked, placed)
     twin = high & enough & _have_mates(places, asked, enough & high, area, over=False)
     return placed | twin | (enough & _have_mates(places, asked, placed, area, over=True))
+
+
+def _after_another(places: Places, asked: Ints, placed: Bools) -> Bools:
+    """(M,) which small components follow a mark, as the comma in "Ibid.", does."""
+    before = keyed_neighbours(places.line, places.middle, asked[placed], asked, 1)[0]
+    gap = places.left[asked] - places.right[np.maximum(before, 0)]
+    return (before >= 0) & (gap < 1.2)
 
 
 def _in_row(places: Places, asked: Ints, among: Bools, area: Floats) -> Bools:

@@ -110,18 +110,21 @@ class Joining:
             if not self._bridge(across_columns=False):
                 break
         self._settle()
-        for _ in range(4):
-            if self.n == 0 or not self._bridge(across_columns=True):
+        for _ in range(5):
+            # what was dropped may have stood between two pieces
+            if self.n == 0 or not (self._bridge(across_columns=True) | self._settle()):
                 break
-        self._settle()
         return self._lines(rough=False)
 
-    def _settle(self) -> None:
-        """Give pieces that stand within a longer line to it, as far as they were not given yet."""
-        if self.n and not self.settled:
-            self._absorb()
-            self._drop(self._guests())
-            self.settled = True
+    def _settle(self) -> bool:
+        """Give pieces that stand within a longer line to it; whether there was one."""
+        if self.settled or not self.n:
+            return False
+        before = self.n
+        self._absorb()
+        self._drop(self._guests())
+        self.settled = True
+        return self.n < before
 
     @property
     def _size(self) -> Ints:
