@@ -35,6 +35,7 @@ _EDGE = 0.12  # of the peak: what is lighter is no longer line
 _POOLED_MM = 25.0  # shorter lines of one make share their profile
 _ABOVE, _SPREAD = 0.18, 0.02  # of the line's amplitude: a stroke adds more, noise is less
 _CAP = 1.04
+_PRIOR = 0.2  # columns that speak for the line's usual strength everywhere
 
 
 @dataclass(frozen=True, eq=False)
@@ -68,12 +69,16 @@ class Lines:
         Density of the column over the profile, by least squares.
     free : (N,) bool array
         No stroke leaves the line's flanks here, and the column is on the page.
+    bridged : (N,) bool array
+        Strokes leave both flanks.
     amplitude : (N,) float array
         What of the strength is the line's own.
     sure : (N,) bool array
         The column holds nothing but the line.
     dashed : (T,) bool array
         The line comes and goes too often for a worn one.
+    pitch : (T,) float array
+        Columns from dash to dash of an evenly dashed line, else 0.
     """
 
     tracks: Tracks
@@ -90,9 +95,11 @@ class Lines:
     level: Floats
     strength: Floats
     free: Bools
+    bridged: Bools
     amplitude: Floats
     sure: Bools
     dashed: Bools
+    pitch: Floats
 
     def __len__(self) -> int:
         return len(self.tracks)
@@ -413,7 +420,8 @@ class _Measure:
         level, _ = self._levels()
         # 3. what of the strength is the line's own
         envelope = self._envelope(level)
-        amplitude, sure = self._own(envelope, level)
+        dashed, pitch = self._dashes(envelope, mm)
+        amplitude, sure = self._own(envelope, level, dashed)
         return Lines(
             tracks=strips.tracks,
             first=strips.first,
@@ -429,9 +437,11 @@ class _Measure:
             level=level,
             strength=self.strength,
             free=self.free,
+            bridged=self.bridged,
             amplitude=amplitude,
             sure=sure,
-            dashed=self._dashed(envelope, mm),
+            dashed=dashed,
+            pitch=pitch,
         )
 
     def _profile(self, good: Bools, amplitude: Floats) -> Floats:
@@ -475,14 +485,16 @@ class _Measure:
         explained = strength**2 * power.ravel()[self.place]
         self.misfit = np.sqrt(np.maximum(square - explained, 0) / np.maximum(explained, 1e-9))
         # a stroke leaves the line where the flanks are darker than the profile has them
-        flank = ((u < lo - 0.3) & (u > lo - 2.3)) | ((u > hi + 0.3) & (u < hi + 2.3))
         excess = (
             self.density
             - self._rows(self._laid(full))
             * np.repeat(amplitude, strips.width).astype(np.float32)[:, None]
         )
-        crossed = (excess > self._rows(np.where(flank, self.ink, 9.0))).any(axis=1)
-        self.free = ~_grown(crossed, 2) & self.on_page
+        above = np.where((u < lo - 0.3) & (u > lo - 2.3), self.ink, np.inf)
+        below = np.where((u > hi + 0.3) & (u < hi + 2.3), self.ink, np.inf)
+        leaves = [(excess > self._rows(flank)).any(axis=1) for flank in (above, below)]
+        self.bridged = leaves[0] & leaves[1] & self.core
+        self.free = ~_grown(leaves[0] | leaves[1], 2) & self.on_page
 
     def _off_ground(self, profile: Floats) -> Floats:
         """The profile less the levels beside it: tinted fields, halos."""
@@ -569,8 +581,12 @@ class _Measure:
         value = np.where(count > 0, ranked[index, np.clip((2 * count) // 5, 0, width - 1)], 0)
         noise = (_SPREAD * level + 0.02)[strips.track]
         base, weight = count.astype(float), count.astype(float)
+        usual = level[strips.track]
         for _ in range(7):
-            smooth = whittaker(value, weight, strips.first, 60.0)
+            # where nothing is known for a while the line is as dark as usual
+            total = weight + _PRIOR
+            pulled = (weight * value + _PRIOR * usual) / total
+            smooth = whittaker(pulled, total, strips.first, 60.0)
             above = value - smooth
             weight = base * np.where(above > noise, 0.15, np.where(above > 0, 0.6, 1.0))
             stroke = above > _ABOVE * np.maximum(smooth, 0.1 * level[strips.track]) + 2 * noise
@@ -581,7 +597,7 @@ class _Measure:
         middle = (np.arange(track.size) - (width - 1) / 2) / width
         return np.interp(middle, index, smooth)
 
-    def _own(self, envelope: Floats, level: Floats) -> tuple[Floats, Bools]:
+    def _own(self, envelope: Floats, level: Floats, dashed: Bools) -> tuple[Floats, Bools]:
         """The line's amplitude in each column, and the columns that hold nothing else."""
         track = self.track
         lying = self.strength > (1 + _ABOVE) * envelope + 2 * (_SPREAD * level + 0.02)[track]
@@ -596,17 +612,32 @@ class _Measure:
         if known.size == 0:
             return np.zeros(track.size), np.zeros(track.size, bool)
         smooth = running_quantile(self.strength[known], np.ones(known.size, bool), 7)
+        smooth = np.where(dashed[track[known]], self.strength[known], smooth)  # dashes have ends
         amplitude = np.interp(np.arange(track.size), known, smooth)
         amplitude = np.minimum(amplitude, np.where(darker, np.inf, _CAP) * envelope)
         return np.maximum(amplitude, 0), ~_grown(~use, 1)
 
-    def _dashed(self, envelope: Floats, mm: float) -> Bools:
+    def _dashes(self, envelope: Floats, mm: float) -> tuple[Bools, Floats]:
+        """Which lines come and go, and at what step if it is an even one (else 0)."""
+        n = self.n
         clean = self.clean & self.free
         low = clean & (self.strength < 0.5 * envelope)
-        enters = low & np.insert(~low[:-1] & clean[:-1], 0, False)
-        dips = np.bincount(self.track[enters], minlength=self.n)
-        length = np.bincount(self.track[clean], minlength=self.n) / mm
-        return np.asarray((dips >= 4) & (dips > length / 4))
+        begins = np.flatnonzero(low & np.insert(~low[:-1] & clean[:-1], 0, False))
+        track = self.track[begins]
+        dips = np.bincount(track, minlength=n)
+        length = np.bincount(self.track[clean], minlength=n) / mm
+        dashed = (dips >= 4) & (dips > length / 4)
+        same = np.diff(track) == 0
+        step, whose = np.diff(begins)[same].astype(float), track[1:][same]
+        # strokes hide dips, so steps are multiples of the pitch
+        shortest = np.maximum(np.nan_to_num(group_quantile(step, whose, n, 0.25)), 1)
+        times = np.maximum(np.rint(step / shortest[whose]), 1)
+        pitch = np.bincount(whose, step, n) / np.maximum(np.bincount(whose, times, n), 1)
+        even = np.abs(step / np.maximum(pitch[whose], 1) - times) < 0.2
+        share = np.bincount(whose[even], minlength=n) / np.maximum(
+            np.bincount(whose, minlength=n), 1
+        )
+        return dashed, np.where(dashed & (dips >= 8) & (share >= 0.65), pitch, 0)
 
 
 # ---- small tools
@@ -635,9 +666,13 @@ def _grown(mask: Bools, by: int) -> Bools:
 
 
 def _gradual(values: Floats, chosen: Bools, scale: Floats) -> Bools:
-    """Stretches of chosen columns in and beside which values change by little from step to step."""
+    """Stretches of chosen columns in and beside which values change by little from step to step.
+
+    Where they fall to nothing the line is broken, which is no step.
+    """
     step = np.zeros(values.size)
     step[3:-3] = np.abs(values[6:] - values[:-6])
+    step[_grown(values < 0.3 * scale, 4)] = 0
     begins = np.insert(chosen[1:] != chosen[:-1], 0, True)
     first = np.flatnonzero(begins)
     if first.size == 0:

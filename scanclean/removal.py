@@ -30,6 +30,8 @@ Ints = NDArray[np.int64]
 _INK = 0.1  # residual density of a stroke
 _SIGMAS = 3.2
 _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a density
+_CROSSED = 12  # columns that tell what strokes add on a rule
+_AS_DARK = 0.15  # difference of density
 _FRINGE_PX = 1.0  # beside a line, still judged by its profile
 _STEPS = 100.0  # of density in a byte
 _SPECK_MM2, _CROSSING_MM2 = 0.1, 0.5  # loose pieces that are a stroke's, at crossings of rules too
@@ -51,16 +53,15 @@ class RuledLines:
     ----------
     lines : Lines
     vertical : bool
+    is_rule : (T,) bool array
     live : (N,) bool array
         Columns of rules.
-    by_shape : (T,) bool array
-        Rules on which tone cannot tell a stroke.
     """
 
     lines: Lines
     vertical: bool
+    is_rule: Bools
     live: Bools
-    by_shape: Bools
 
     def turned(self, page: NDArray[np.generic]) -> NDArray[np.generic]:
         """A view of the page in which the lines run along the rows."""
@@ -73,7 +74,7 @@ def rule_pixels(
     noise: float,
     ruled: list[RuledLines],
     resolution: Resolution,
-) -> RunSet:
+) -> tuple[RunSet, list[Bools]]:
     """The part of the ink that is rule and nothing else.
 
     Parameters
@@ -88,15 +89,19 @@ def rule_pixels(
 
     Returns
     -------
-    RunSet
+    taken : RunSet
+    by_shape : list of (T,) bool arrays
+        For each of `ruled`, the rules on which shape decided.
     """
     flags = np.zeros(ink.shape, np.uint8)
-    predicted = np.zeros(ink.shape, np.uint8)  # density of the rules, in steps
-    if ratio is not None:
+    if ratio is None:
+        by_shape = [part.is_rule for part in ruled]
+    else:
+        predicted = np.zeros(ink.shape, np.uint8)  # density of the rules, in steps
         for part in ruled:
             _lay_density(part, part.turned(predicted), part.turned(flags))
-    if any(part.by_shape.any() for part in ruled):
-        _lay_shape(ruled, ink, flags)
+        by_shape = _saturated(ruled, flags, noise)
+    _lay_shape(ruled, by_shape, ink, flags)
 
     zone = np.flatnonzero(flags)
     flag = flags.ravel()[zone]
@@ -112,16 +117,59 @@ def rule_pixels(
     strokes = _points(ink.shape, zone[is_stroke]) & ink
     both = (flag & (_ZONE[0] | _SHAPED[0]) > 0) & (flag & (_ZONE[1] | _SHAPED[1]) > 0)
     crossings = _points(ink.shape, zone[both])
-    return on_rules - (strokes - _loose(strokes, ink - on_rules, crossings, resolution))
+    loose = _loose(strokes, ink - on_rules, crossings, resolution)
+    return on_rules - (strokes - loose), by_shape
+
+
+def _margin(density: Floats, noise: float) -> Floats:
+    """Density above a rule's own from which on it is a stroke's.
+
+    The noise of a density grows with the density.
+    """
+    return np.maximum(_INK, _SIGMAS * _PER_RATIO * noise * 10 ** np.minimum(density, 1.2))
+
+
+def _saturated(ruled: list[RuledLines], flags: Bytes, noise: float) -> list[Bools]:
+    """Rules on which strokes leave no density of their own.
+
+    Where strokes come out on both sides of a rule they must be in it too. What they add there is
+    measured, on this rule or, if few strokes cross it, on all that are as dark.
+    """
+    peaks, added, owners = [], [], []
+    for number, part in enumerate(ruled):
+        lines = part.lines
+        turned = part.turned(flags)
+        row = np.clip(np.rint(lines.centre).astype(np.int64), 0, turned.shape[0] - 1)
+        column = np.minimum(lines.column, turned.shape[1] - 1)
+        other = turned[row, column] & _ZONE[not part.vertical] > 0
+        other = np.convolve(other, np.ones(9), mode="same") > 0
+        crossed = np.flatnonzero(lines.bridged & part.live & ~other)
+        track = lines.track[crossed]
+        extra = lines.strength[crossed] - lines.amplitude[crossed]
+        added.append(extra * lines.profile.max(axis=1)[track])
+        peaks.append(lines.peak[track])
+        owners.append(np.stack((np.full(track.size, number), track), axis=1))
+    all_peaks, all_added = np.concatenate(peaks), np.concatenate(added)
+    all_owners = np.concatenate(owners)
+    by_shape = []
+    for number, part in enumerate(ruled):
+        saturated = np.zeros(len(part.lines), bool)
+        for i in np.flatnonzero(part.is_rule):
+            peak = part.lines.peak[i]
+            some = (all_owners == (number, i)).all(axis=1)
+            if np.count_nonzero(some) < _CROSSED:
+                some = np.abs(all_peaks - peak) < _AS_DARK
+            if np.count_nonzero(some) >= _CROSSED:
+                saturated[i] = np.quantile(all_added[some], 0.75) < _margin(peak, noise)
+        by_shape.append(saturated)
+    return by_shape
 
 
 def _is_darker(ratio: Bytes, predicted: Bytes, flag: Bytes, noise: float) -> Bools:
-    """Which pixels are darker than their rules by more than noise explains.
-
-    The noise of a density grows with the density: a table by steps of it serves all pixels.
-    """
+    """Which pixels are darker than their rules by more than noise explains."""
+    # a table by steps of density serves all pixels
     rule = np.arange(256) / _STEPS
-    margin = np.maximum(_INK, _SIGMAS * _PER_RATIO * noise * 10 ** np.minimum(rule, 1.2))
+    margin = _margin(rule, noise)
     darkest = 255 * 10.0 ** -(rule + margin)
     darkest_sure = 255 * 10.0 ** -(rule + 1.5 * margin)
     return ratio < np.where(flag & _DOUBTFUL, darkest[predicted], darkest_sure[predicted])
@@ -139,10 +187,17 @@ def _lay_density(part: RuledLines, predicted: Bytes, flags: Bytes) -> None:
     flags[y, x] |= np.where(lines.sure[some[i]], zone, zone | _DOUBTFUL).astype(np.uint8)
 
 
-def _lay_shape(ruled: list[RuledLines], ink: RunSet, flags: Bytes) -> None:
+def _lay_shape(ruled: list[RuledLines], by_shape: list[Bools], ink: RunSet, flags: Bytes) -> None:
     """Enter the zones of lines that shape decides, and the strokes found in them."""
+    if not any(chosen.any() for chosen in by_shape):
+        return
     page = ink.to_mask()
-    bands = [band for part in ruled if part.by_shape.any() for band in _bands(part, page)]
+    bands = [
+        band
+        for part, chosen in zip(ruled, by_shape, strict=True)
+        if chosen.any()
+        for band in _bands(part, chosen, page)
+    ]
     for band in bands:
         band.enter(flags, band.half + 1, _RIM)
         band.enter(flags, band.half, _SHAPED[band.part.vertical])
@@ -184,14 +239,14 @@ class _Band:
         self.enter(flags, self.half, _KEPT[self.part.vertical], kept)
 
 
-def _bands(part: RuledLines, page: Bools) -> list[_Band]:
+def _bands(part: RuledLines, chosen: Bools, page: Bools) -> list[_Band]:
     lines = part.lines
     low, high = edges_of(lines, np.asarray(part.turned(page)))
     half = np.rint((high - low) / 2).astype(np.int64)
     middle = np.rint(lines.centre + ((low + high) / 2)[lines.track]).astype(np.int64)
     bands = []
-    for rows in np.unique(half[part.by_shape]):
-        mine = np.flatnonzero((part.by_shape & (half == rows))[lines.track])
+    for rows in np.unique(half[chosen]):
+        mine = np.flatnonzero((chosen & (half == rows))[lines.track])
         band = _Band(part, int(rows), middle[mine], lines.column[mine], part.live[mine])
         bands.append(band)
     return bands

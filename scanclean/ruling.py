@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scanclean.dashes import DashedRule, find_dashes
 from scanclean.density import DENSITY, Tone
 from scanclean.frames import Segments, hatched, short_rules, worth_measuring
 from scanclean.profiles import Lines, measure_lines
@@ -37,19 +38,18 @@ _LONG_MM = 60.0  # from here a rule need not run as the page's others do, nor be
 _REACH_MM, _SHORT_REACH_MM = 13.0, 3.0  # how far ends may run on
 _FAINTEST = 0.92  # of the paper: what is darker may be a rule, faded ones included
 _STEADY, _STEADY_SHORT = 0.22, 0.35  # roughness; letters in a row have 0.27 and more
+_DASH_PITCH_MM = 3.0
 _BATCH = 1 << 21  # samples measured at a time
 
 _STROKE = 0.1  # density in a line's flank from which on it is a stroke
 _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a density
 
+_POINT_PX = 16  # between the points of a rule's centre
+
 # of a bitonal scan the share of ink along a line stands for density
 _COVER = (0.8 * (1 - np.arange(256) / 255)).astype(np.float32)
 _COVER_MM = 0.34  # over so much on both sides
 _HALF = 0.63  # of the scale: more than a third of the pixels are ink
-
-# a rule is saturated where it leaves a stroke so little to add
-_ADDS = 0.12
-_INK = 0.3  # density of what is ink for sure
 
 
 @dataclass(frozen=True)
@@ -70,6 +70,9 @@ class RuleSettings:
     frames: bool = setting(
         True, "take shorter lines where they close a box or hang on a rule as ticks"
     )
+    dashed: bool = setting(
+        True, "take dotted and dashed lines; rows of hyphens and of typed full stops stay"
+    )
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,11 +87,13 @@ class Rule:
     thickness_px : float
         Of an even line of the same darkness along its middle and the same ink in all.
     density : float
-        Usual optical density along the middle.
+        Usual optical density along the middle; 1 of a line found by its shape.
     evidence : {"density", "shape"}
         What told the rule from the strokes on it.
     centre : (P, 2) float array
         Points x, y along the middle, in page coordinates.
+    dash : (float, float) or None
+        Length of a mark and of a gap in pixels; None of a solid line.
     """
 
     direction: str
@@ -97,6 +102,7 @@ class Rule:
     density: float
     evidence: str
     centre: Floats
+    dash: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -148,17 +154,30 @@ def find_rules(
     _accept_long(sides)
     if settings.frames:
         _accept_short(sides)
-    if settings.directions != "both":
-        # the other direction has borne witness, its lines stay
-        sides = tuple(s for s in sides if s.vertical == (settings.directions == "vertical"))
-    if not any(is_rule.any() for side in sides for _, is_rule in side.found):
-        return Ruling((), nothing, nothing)
-    limit = -np.inf if tone is None else _saturation(tone)
-    rules = tuple(rule for side in sides for rule in side.records(limit))
-    ruled = [part for side in sides for part in side.ruled(limit)]
-    ratio = None if tone is None else tone.ratio
-    taken = rule_pixels(ink, ratio, noise or 0.0, ruled, resolution)
-    return Ruling(rules, taken, nothing)
+    # a direction that is not wanted has borne witness for the other one, its lines stay
+    wanted = tuple(
+        side
+        for side in sides
+        if settings.directions in ("both", "vertical" if side.vertical else "horizontal")
+    )
+    ruled = [part for side in wanted for part in side.ruled()]
+    taken, records = nothing, []
+    if ruled:
+        ratio = None if tone is None else tone.ratio
+        taken, by_shape = rule_pixels(ink, ratio, noise or 0.0, ruled, resolution)
+        for part, chosen in zip(ruled, by_shape, strict=True):
+            records += _records(part, chosen)
+    if settings.dashed:
+        dashed, marks = find_dashes(
+            ink - taken,
+            resolution,
+            directions=tuple(side.vertical for side in wanted),
+            max_thickness=settings.max_thickness,
+        )
+        taken = taken | marks
+        records += [_record_of(rule) for rule in dashed]
+    records.sort(key=_place)
+    return Ruling(tuple(records), taken, nothing)
 
 
 def _covers(ink: RunSet, resolution: Resolution) -> tuple[Bytes, Bytes]:
@@ -171,17 +190,36 @@ def _covers(ink: RunSet, resolution: Resolution) -> tuple[Bytes, Bytes]:
     return np.asarray(page.filter(along_x)), np.asarray(page.filter(along_y)).T
 
 
-def _saturation(tone: Tone) -> float:
-    """Density from which on a rule is as dark as the darkest the page has."""
-    from PIL import Image
+def _place(rule: Rule) -> tuple[str, float, tuple[int, int, int, int]]:
+    """Horizontal rules from top to bottom, then vertical ones from left to right."""
+    across = rule.centre[:, 1 if rule.direction == "horizontal" else 0]
+    return rule.direction, float(np.median(across)), rule.box
 
-    count = np.array(Image.fromarray(tone.ratio).histogram())
-    count[DENSITY <= _INK] = 0
-    if not count.any():
-        return np.inf
-    total = np.cumsum(count)
-    darkest = float(DENSITY[np.searchsorted(total, 0.005 * total[-1])])
-    return darkest - _ADDS
+
+def _record_of(rule: DashedRule) -> Rule:
+    direction = "vertical" if rule.vertical else "horizontal"
+    return Rule(direction, rule.box, rule.thickness_px, 1.0, "shape", rule.centre, rule.dash)
+
+
+def _records(part: RuledLines, by_shape: Bools) -> Iterator[Rule]:
+    lines, thickness = part.lines, part.lines.thickness()
+    begin = np.searchsorted(lines.track, np.arange(len(lines) + 1))
+    for i in np.flatnonzero(part.is_rule):
+        place = begin[i] + np.flatnonzero(part.live[begin[i] : begin[i + 1]])
+        column, centre = lines.column[place], lines.centre[place]
+        left, right = int(column[0]), int(column[-1]) + 1
+        top = max(0, int(np.floor(centre.min() + lines.low[i] + 0.5)))
+        bottom = int(np.ceil(centre.max() + lines.high[i] + 0.5))
+        some = np.append(np.arange(0, place.size - 1, _POINT_PX), place.size - 1)
+        points = np.stack((column[some], centre[some]), axis=1) + 0.5
+        yield Rule(
+            "vertical" if part.vertical else "horizontal",
+            (top, left, bottom, right) if part.vertical else (left, top, right, bottom),
+            float(thickness[i]),
+            float(lines.peak[i]),
+            "shape" if by_shape[i] else "density",
+            points[:, ::-1] if part.vertical else points,
+        )
 
 
 # ---- which lines are rules
@@ -202,6 +240,7 @@ class _Side:
         self.table = _COVER if noise is None else DENSITY
         turned = resolution.transposed if vertical else resolution
         self.mm, self.mm_across = turned.x_mm, turned.y_mm
+        self.dashed = settings.dashed
         self.min_length = settings.min_length.px(turned.x) / self.mm
         self.max_thickness = settings.max_thickness.px(turned.y)
         self.stroke = max(_STROKE, 5 * _PER_RATIO * (noise or 0.0))
@@ -290,7 +329,11 @@ class _Side:
         # letters in a row leave gaps; so does a worn rule, but that is long or stands alone
         is_rule = (absent <= 0.15) & (isolated >= np.where(isolated * length > 12, 0.12, 0.2))
         is_rule |= (absent <= 0.35) & (isolated >= 0.4) & (length > _LONG_MM)
-        is_rule &= (lines.peak >= 0.03) & ~lines.dashed
+        is_rule &= ~lines.dashed
+        if self.dashed:
+            # the step of a typewriter's hyphens is shorter
+            is_rule |= (lines.pitch >= _DASH_PITCH_MM * self.mm) & (isolated >= 0.12)
+        is_rule &= lines.peak >= 0.03
         is_rule &= lines.high - lines.low <= 1.15 * self.max_thickness
         is_rule &= bend / self.mm_across <= np.minimum(0.16, 0.02 + 0.0012 * length)
         is_rule &= lines.agreement(0.12 * self.mm_across) >= 0.85
@@ -304,47 +347,13 @@ class _Side:
         )
         return straight & (lines.isolated() >= 0.3) & (lines.peak >= 0.03)
 
-    def ruled(self, limit: float) -> list[RuledLines]:
-        """The rules' columns; shape decides on lines of a density above the limit."""
+    def ruled(self) -> list[RuledLines]:
+        """The rules found, with their columns."""
         return [
-            RuledLines(
-                lines,
-                self.vertical,
-                self.extent(lines) & is_rule[lines.track],
-                is_rule & (lines.peak > limit),
-            )
+            RuledLines(lines, self.vertical, is_rule, self.extent(lines) & is_rule[lines.track])
             for lines, is_rule in self.found
             if is_rule.any()
         ]
-
-    def records(self, limit: float) -> list[Rule]:
-        """The rules, from the first one across the page to the last; `limit` as of `ruled`."""
-        found = [
-            rule for lines, is_rule in self.found for rule in self._records(lines, is_rule, limit)
-        ]
-        axis = 0 if self.vertical else 1
-        return sorted(found, key=lambda rule: (float(np.median(rule.centre[:, axis])), rule.box))
-
-    def _records(self, lines: Lines, is_rule: Bools, limit: float) -> Iterator[Rule]:
-        extent, thickness = self.extent(lines), lines.thickness()
-        step = max(1, round(self.mm))
-        begin = np.searchsorted(lines.track, np.arange(len(lines) + 1))
-        for i in np.flatnonzero(is_rule):
-            place = begin[i] + np.flatnonzero(extent[begin[i] : begin[i + 1]])
-            column, centre = lines.column[place], lines.centre[place]
-            left, right = int(column[0]), int(column[-1]) + 1
-            top = max(0, int(np.floor(centre.min() + lines.low[i] + 0.5)))
-            bottom = min(self.page.shape[0], int(np.ceil(centre.max() + lines.high[i] + 0.5)))
-            some = np.append(np.arange(0, place.size - 1, step), place.size - 1)
-            points = np.stack((column[some], centre[some]), axis=1) + 0.5
-            yield Rule(
-                "vertical" if self.vertical else "horizontal",
-                (top, left, bottom, right) if self.vertical else (left, top, right, bottom),
-                float(thickness[i]),
-                float(lines.peak[i]),
-                "shape" if lines.peak[i] > limit else "density",
-                points[:, ::-1] if self.vertical else points,
-            )
 
 
 def _accept_long(sides: tuple[_Side, ...]) -> None:
