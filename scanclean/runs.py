@@ -229,12 +229,15 @@ def union(*sets: RunSet) -> RunSet:
         If no page is given or the shapes differ.
     """
     shape = one_shape(sets)
-    return RunSet(shape, covered(*_all_bounds(sets), at_least=1))
+    sets = tuple(s for s in sets if s) or sets[:1]
+    return sets[0] if len(sets) == 1 else RunSet(shape, covered(*_all_bounds(sets), at_least=1))
 
 
 def intersection(*sets: RunSet) -> RunSet:
     """The points that are in all of one or more pages of one shape; raises as `union`."""
     shape = one_shape(sets)
+    if not all(sets):
+        return RunSet.empty(shape)
     return RunSet(shape, covered(*_all_bounds(sets), at_least=len(sets)))
 
 
@@ -246,6 +249,8 @@ def difference(a: RunSet, b: RunSet) -> RunSet:
     [[1, 0, 1, 1]]
     """
     shape = one_shape((a, b))
+    if not a or not b:
+        return a
     # b read inside out: between two of its runs lies one interval of its complement, and the
     # first and last reach beyond the page on both sides
     height, width = shape
@@ -342,7 +347,9 @@ def crop(a: RunSet, box: tuple[int, int, int, int]) -> RunSet:
     shape = (bottom - top, right - left)
     if min(shape) < 0:
         raise ValueError(f"a box needs left <= right and top <= bottom, got {box}")
-    starts, stops = clipped(shape, a.row - top, a.start - left, a.stop - left)
+    first = a.bounds[0::2]
+    some = slice(*np.searchsorted(first, [max(y, 0) * (a.shape[1] + 1) for y in (top, bottom)]))
+    starts, stops = clipped(shape, a.row[some] - top, a.start[some] - left, a.stop[some] - left)
     return RunSet(shape, np.stack((starts, stops), axis=1).ravel())
 
 
