@@ -44,8 +44,12 @@ def scikit_image(source: Path, folder: Path) -> None:
     holes = ndimage.binary_fill_holes(cleaned) & ~cleaned
     cleaned |= holes & ~morphology.remove_small_objects(holes, max_size=HOLE)
     labels = measure.label(cleaned, connectivity=2)
-    boxes = [region.bbox for region in measure.regionprops(labels)]
-    _write(folder, cleaned, _map(cleaned, ink), boxes)
+    # what the layout tells of each: its box, its area and its holes
+    regions = [
+        (*region.bbox, int(region.area), 1 - region.euler_number)
+        for region in measure.regionprops(labels)
+    ]
+    _write(folder, cleaned, _map(cleaned, ink), regions)
 
 
 def opencv(source: Path, folder: Path) -> None:
