@@ -108,22 +108,21 @@ def line_counts(page: CleanPage, factor: int) -> list[list[int]]:
 
 
 AS_IT_IS, ENLARGED = 1, 3
-MARGIN = pytest.mark.xfail(reason="print in the shadow is taken for a scanner's dark margin")
 SOFT = pytest.mark.xfail(reason="print in the shadow and out of focus is taken for shade")
 
 
-def factors(*, as_it_is=(), enlarged=()):
-    """Both sizes of the page, with the marks of each."""
+def factors(*, enlarged=()):
+    """Both sizes of a page, the larger one with its marks."""
     return pytest.mark.parametrize(
         "factor",
         [
-            pytest.param(AS_IT_IS, marks=as_it_is, id="as it is"),
+            pytest.param(AS_IT_IS, id="as it is"),
             pytest.param(ENLARGED, marks=enlarged, id="enlarged"),
         ],
     )
 
 
-@factors(as_it_is=MARGIN, enlarged=SOFT)
+@factors(enlarged=SOFT)
 def test_the_lines_of_the_printed_page(factor):
     page = printed(factor)
     whole = page.lines.box[page.lines.box[:, 1] < CUT[1] * factor]
@@ -134,7 +133,7 @@ def test_the_lines_of_the_printed_page(factor):
     assert (cut[:, 2] <= CUT[2] * factor).all()
 
 
-@factors(as_it_is=MARGIN, enlarged=MARGIN)
+@factors()
 def test_each_character_of_the_printed_page_is_a_glyph(factor):
     found = [sum(words) for words in line_counts(printed(factor), factor)]
     assert len(found) == len(PRINTED)
@@ -142,7 +141,7 @@ def test_each_character_of_the_printed_page_is_a_glyph(factor):
         assert count in glyph_range(text.replace(" ", "")), text
 
 
-@factors(as_it_is=MARGIN, enlarged=SOFT)
+@factors(enlarged=SOFT)
 def test_the_words_of_the_printed_page(factor):
     found = line_counts(printed(factor), factor)
     assert [len(words) for words in found] == [len(text.split()) for text in PRINTED]
@@ -162,7 +161,6 @@ def test_the_shadow_of_the_printed_page_is_no_ink(factor):
         assert contrast(data.page(), window=31)[thresholded].min() > 0.1
 
 
-@MARGIN
 def test_nothing_of_the_print_is_lost():
     pixels = data.page()
     dark = contrast(pixels, window=31)
