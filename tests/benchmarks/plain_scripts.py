@@ -46,7 +46,7 @@ def scikit_image(source: Path, folder: Path) -> None:
     labels = measure.label(cleaned, connectivity=2)
     # what the layout tells of each: its box, its area and its holes
     regions = [
-        (*region.bbox, int(region.area), 1 - region.euler_number)
+        (*region.bbox, int(region.area), int(1 - region.euler_number))
         for region in measure.regionprops(labels)
     ]
     _write(folder, cleaned, _map(cleaned, ink), regions)
