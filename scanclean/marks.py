@@ -27,6 +27,7 @@ Bools = NDArray[np.bool_]
 _DOT_OF_STROKE = 0.8  # area of a dot where none can be measured, of the squared stroke width
 _DOTS_TO_MEASURE = 8
 _LEAST_OF_DOT = 0.4  # worn or faint, a mark keeps so much of the usual dot's area
+_PIECE = 4.0  # dots: what is larger, and low, is a piece of a letter
 _WORD = 2.0  # wider bodies are words of a running hand, or letters grown together
 
 
@@ -113,12 +114,12 @@ class Surroundings:
     within: Bools
 
     @classmethod
-    def of(cls, places: Places, asked: Ints) -> Surroundings:
+    def of(cls, places: Places, asked: Ints, bodies: Bools) -> Surroundings:
         """Look at the four nearest bodies in the line of each component asked."""
         top, bottom, middle = places.top[asked], places.bottom[asked], places.middle[asked]
         before, behind, clear = np.full((3, asked.size), np.inf)
         over, over_i, over_word, under, within = np.zeros((5, asked.size), bool)
-        for near in places.bodies_near(asked):
+        for near in places.bodies_near(asked, among=bodies):
             there, body = near >= 0, np.maximum(near, 0)
             left, right = places.left[body], places.right[body]
             head, foot = places.top[body], places.bottom[body]
@@ -159,7 +160,9 @@ def are_marks(places: Places, asked: Ints, area: Floats, lump: Bools, dots: Dots
     top, bottom = places.top[asked], places.bottom[asked]
     width, height, level = places.width[asked], places.height[asked], (top + bottom) / 2
     size, is_round = area[asked] / dots.area, lump[asked]
-    here = Surroundings.of(places, asked)
+    # half a worn letter carries its dot as well as a whole one
+    broken = (places.line >= 0) & (area > _PIECE * dots.area) & (places.bottom < 0.6)
+    here = Surroundings.of(places, asked, places.body | broken)
     gap = np.minimum(here.before, here.behind)
     enough = size >= _LEAST_OF_DOT
     # Round marks are dots: as large as dots are, and where dots are. How strictly, the page tells.
@@ -195,7 +198,8 @@ def _after_another(places: Places, asked: Ints, placed: Bools) -> Bools:
     """(M,) which small components follow a mark, as the comma in "Ibid.", does."""
     before = keyed_neighbours(places.line, places.middle, asked[placed], asked, 1)[0]
     gap = places.left[asked] - places.right[np.maximum(before, 0)]
-    return (before >= 0) & (gap < 1.2)
+    follows: Bools = (before >= 0) & (gap < 1.2)
+    return follows
 
 
 def _in_row(places: Places, asked: Ints, among: Bools, area: Floats) -> Bools:

@@ -203,9 +203,8 @@ class Joining:
     def _gaps(self, pieces: Pieces, *, across_columns: bool) -> Gaps:
         """Gaps between pieces that would make one line of both."""
         n, lines = self.n, pieces.baselines
-        # Pieces are ordered by the centres of their first and last letters, and a little within:
-        # in slanted writing the boxes of neighbours overlap, and of a colon one dot may have gone to
-        # each of two pieces.
+        # Pieces are ordered by the centres of their first and last letters, and a little within: in
+        # slanted writing boxes overlap, and of a colon one dot may have gone to each of two pieces.
         first, last = np.full(n, np.inf), np.full(n, -np.inf)
         np.minimum.at(first, self.piece, self.shapes.x[self.letters])
         np.maximum.at(last, self.piece, self.shapes.x[self.letters])

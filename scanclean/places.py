@@ -63,12 +63,14 @@ class Places:
         """(C,) of the boxes."""
         return self.top - self.bottom
 
-    def bodies_near(self, asked: Ints, *, count: int = 2) -> Ints:
+    def bodies_near(self, asked: Ints, *, count: int = 2, among: Bools | None = None) -> Ints:
         """(2 count, M) bodies of the same line about each component asked, or -1.
 
-        The nearest whose middles lie to the left, outwards, then those to the right.
+        The nearest whose middles lie to the left, outwards, then those to the right. `among` takes
+        other components for the bodies.
         """
-        return keyed_neighbours(self.line, self.middle, np.flatnonzero(self.body), asked, count)
+        bodies = np.flatnonzero(self.body if among is None else among)
+        return keyed_neighbours(self.line, self.middle, bodies, asked, count)
 
 
 def find_places(lines: LineSet, shapes: Shapes) -> Places:

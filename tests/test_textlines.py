@@ -11,8 +11,8 @@ from fixtures.drawn import draw
 from scanclean.columns import Gaps, Occupied, corridors
 from scanclean.labels import label
 from scanclean.neighbours import (
-    best_of_both,
     beside,
+    best_of_both,
     chains,
     grouped_median,
     keyed_neighbours,
@@ -140,7 +140,12 @@ def test_lines_are_found_up_to_ten_degrees(skew):
 
 @pytest.mark.parametrize(
     ("dpi", "face", "points"),
-    [(150.0, "sans", 9.0), (200.0, "serif", 24.0), (300.0, "garamond", 6.0), (600.0, "italic", 8.0)],
+    [
+        (150.0, "sans", 9.0),
+        (200.0, "serif", 24.0),
+        (300.0, "garamond", 6.0),
+        (600.0, "italic", 8.0),
+    ],
 )
 def test_lines_of_every_size(dpi, face, points):
     page = set_text(PROSE, face=face, points=points, dpi=dpi, size=(180.0, 55.0), skew=0.5)
@@ -242,9 +247,9 @@ def test_a_moved_page_has_the_same_lines_moved():
     page = set_text(PROSE, skew=0.8).ink
     moved = np.pad(page, ((37, 5), (91, 12)))
     one, other = read(page), read(moved)
-    assert np.array_equal(one.glyphs.box + [91, 37, 91, 37], other.glyphs.box)
+    assert np.array_equal(one.glyphs.box + np.array([91, 37, 91, 37]), other.glyphs.box)
     assert np.array_equal(one.glyphs.word, other.glyphs.word)
-    assert np.allclose(one.lines.baseline + [91, 37], other.lines.baseline, atol=1e-6)
+    assert np.allclose(one.lines.baseline + np.array([91, 37]), other.lines.baseline, atol=1e-6)
 
 
 def test_the_slices_of_a_word_are_made_of_its_runs():
