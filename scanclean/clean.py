@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from functools import partial
@@ -122,12 +121,11 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     resolution = scan.dpi or _likely_resolution(scan.shape)
     pixels = scan.pixels if scan.pixels.dtype == np.bool_ else scan.grey()
     start = _find_ink(pixels, resolution, recipe)
-    to_source, turned = np.eye(3), 0.0
-    if straighten:
-        degrees = find_skew(start.ink - start.shade, resolution)
-        if abs(degrees) >= _LEAST_TURN:
-            pixels, to_source = turn(pixels, degrees, resolution)
-            start, turned = _find_ink(pixels, resolution, recipe), degrees
+    skew, to_source = find_skew(start.ink - start.shade, resolution), np.eye(3)
+    leaning = skew
+    if straighten and abs(skew) >= _LEAST_TURN:
+        pixels, to_source = turn(pixels, skew, resolution)
+        start, leaning = _find_ink(pixels, resolution, recipe), 0.0
     if scan.dpi is None:
         resolution = _estimated(start.ink - start.shade, resolution)
 
@@ -150,7 +148,7 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     )
     books.mend(pinholes)
     add_steps("holes")
-    text = _Text(books.ink, resolution)
+    text = _Text(books.ink, resolution, leaning)
     speck = find_specks(
         text.components, text.lines, text.measures, resolution, recipe.specks, spread=text.spread
     )
@@ -160,7 +158,7 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     if books.ink == before:
         text.forget(speck)
     else:
-        text = _Text(books.ink, resolution)
+        text = _Text(books.ink, resolution, leaning)
     glyphs, lines = put_in_order(
         text.components, join_parts(text.components, text.lines, spread=text.spread), text.lines
     )
@@ -169,7 +167,7 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
         ledger=ledger,
         resolution=resolution,
         dpi_estimated=scan.dpi is None,
-        skew_degrees=turned + text.skew_degrees,
+        skew_degrees=skew,
         to_source=to_source[:2],
         measures=_measures(ledger, text, start, int(speck.sum()), resolution),
         flags=_flags(scan, start, text, int(speck.sum()), resolution),
@@ -297,12 +295,16 @@ def _add_steps(books: _Books, steps: tuple[Step, ...], resolution: Resolution, a
 class _Text:
     """The components of a page with their measures and text lines."""
 
-    def __init__(self, ink: RunSet, resolution: Resolution) -> None:
+    def __init__(self, ink: RunSet, resolution: Resolution, skew_degrees: float) -> None:
         self.components: Components = label(ink)
         self.spread: Spread = measure_spread(self.components)
         self.measures: TextMeasures = measure_text(self.components, resolution, spread=self.spread)
         self.lines: LineSet = find_lines(
-            self.components, self.measures, resolution, spread=self.spread
+            self.components,
+            self.measures,
+            resolution,
+            skew_degrees=skew_degrees,
+            spread=self.spread,
         )
 
     def forget(self, speck: NDArray[np.bool_]) -> None:
@@ -310,11 +312,6 @@ class _Text:
         if speck.any():
             self.components = self.components.select(~speck)
             self.spread = measure_spread(self.components)
-
-    @property
-    def skew_degrees(self) -> float:
-        """Of the text lines, in square pixels."""
-        return math.degrees(math.atan(self.lines.frame.slope)) if self.lines.n else 0.0
 
 
 # ---- what is told about the page
