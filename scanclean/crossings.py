@@ -13,7 +13,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from scanclean.profiles import Lines
+from scanclean.lines import Lines
 from scanclean.runs import RunSet
 
 __all__ = ["edges_of", "modal_stroke", "strokes_within"]
@@ -55,7 +55,8 @@ def edges_of(lines: Lines, page: Bools) -> tuple[Floats, Floats]:
     low, high : (T,) float arrays
         In rows from the centre; rows that a fifth of the columns without strokes fill count.
     """
-    n, samples = len(lines), lines.density.shape[1]
+    n, samples = len(lines), lines.samples
+    first_low, first_high = lines.profiles.extent
     some = np.flatnonzero(lines.free & lines.within)[::3]
     row = lines.top[some, None] + np.arange(samples)
     is_ink = _sampled(page, row, lines.column[some])
@@ -65,12 +66,12 @@ def edges_of(lines: Lines, page: Bools) -> tuple[Floats, Floats]:
     total = np.bincount(place.ravel(), minlength=n * half_rows)
     filled = np.bincount(place.ravel(), is_ink.ravel(), n * half_rows) / np.maximum(total, 1)
     u = (np.arange(half_rows) + 0.5) / 2 - samples / 2
-    near = (u >= lines.low[:, None] - 1) & (u <= lines.high[:, None] + 1)
+    near = (u >= first_low[:, None] - 1) & (u <= first_high[:, None] + 1)
     on = near & (filled.reshape(n, half_rows) > _SHARE)
     low = np.where(on, u, np.inf).min(axis=1) - 0.25
     high = np.where(on, u, -np.inf).max(axis=1) + 0.25
     found = on.any(axis=1)
-    return np.where(found, low, lines.low), np.where(found, high, lines.high)
+    return np.where(found, low, first_low), np.where(found, high, first_high)
 
 
 def strokes_within(

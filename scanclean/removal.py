@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from scanclean.crossings import edges_of, modal_stroke, strokes_within
 from scanclean.elements import box
 from scanclean.labels import label
+from scanclean.lines import Lines
 from scanclean.morphology import dilate
-from scanclean.profiles import Lines
 from scanclean.runs import RunSet
 from scanclean.units import Resolution
 
@@ -146,7 +146,7 @@ def _saturated(ruled: list[RuledLines], flags: Bytes, noise: float) -> list[Bool
         crossed = np.flatnonzero(lines.bridged & part.live & ~other)
         track = lines.track[crossed]
         extra = lines.strength[crossed] - lines.amplitude[crossed]
-        added.append(extra * lines.profile.max(axis=1)[track])
+        added.append(extra * lines.profiles.peak[track])
         peaks.append(lines.peak[track])
         owners.append(np.stack((np.full(track.size, number), track), axis=1))
     all_peaks, all_added = np.concatenate(peaks), np.concatenate(added)
@@ -178,9 +178,9 @@ def _is_darker(ratio: Bytes, predicted: Bytes, flag: Bytes, noise: float) -> Boo
 def _lay_density(part: RuledLines, predicted: Bytes, flags: Bytes) -> None:
     """Enter the density of lines, in their live columns, into the page's."""
     lines, some = part.lines, np.flatnonzero(part.live)
-    row, column, density = lines.predicted(some, _FRINGE_PX)
-    i, j = np.nonzero((density >= 0) & (row >= 0) & (row < predicted.shape[0]))
-    y, x = row[i, j], column[i]
+    row, density, belongs = lines.predicted(some, _FRINGE_PX)
+    i, j = np.nonzero(belongs & (row >= 0) & (row < predicted.shape[0]))
+    y, x = row[i, j], lines.column[some[i]]
     step = np.minimum(_STEPS * density[i, j] + 0.5, 255).astype(np.uint8)
     predicted[y, x] = np.maximum(predicted[y, x], step)
     zone = _ZONE[part.vertical]

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from scanclean.dashes import DashedRule, find_dashes
 from scanclean.density import DENSITY, Tone
 from scanclean.frames import Segments, hatched, short_rules, worth_measuring
-from scanclean.profiles import Lines, measure_lines
+from scanclean.lines import Lines, measure_lines
 from scanclean.removal import RuledLines, rule_pixels
 from scanclean.runs import RunSet
 from scanclean.settings import setting
@@ -202,14 +202,15 @@ def _record_of(rule: DashedRule) -> Rule:
 
 
 def _records(part: RuledLines, by_shape: Bools) -> Iterator[Rule]:
-    lines, thickness = part.lines, part.lines.thickness()
-    begin = np.searchsorted(lines.track, np.arange(len(lines) + 1))
+    lines = part.lines
+    thickness = lines.profiles.even_thickness(lines.level)
+    low, high = lines.profiles.extent
     for i in np.flatnonzero(part.is_rule):
-        place = begin[i] + np.flatnonzero(part.live[begin[i] : begin[i + 1]])
+        place = lines.begin[i] + np.flatnonzero(part.live[lines.begin[i] : lines.begin[i + 1]])
         column, centre = lines.column[place], lines.centre[place]
         left, right = int(column[0]), int(column[-1]) + 1
-        top = max(0, int(np.floor(centre.min() + lines.low[i] + 0.5)))
-        bottom = int(np.ceil(centre.max() + lines.high[i] + 0.5))
+        top = max(0, int(np.floor(centre.min() + low[i] + 0.5)))
+        bottom = int(np.ceil(centre.max() + high[i] + 0.5))
         some = np.append(np.arange(0, place.size - 1, _POINT_PX), place.size - 1)
         points = np.stack((column[some], centre[some]), axis=1) + 0.5
         yield Rule(
@@ -288,7 +289,7 @@ class _Side:
                     self.tracks.select(batch),
                     mm=self.mm,
                     reach=round(reach_mm * self.mm),
-                    ink=self.stroke,
+                    stroke=self.stroke,
                 ),
             )
             chosen, thickness, cost = chosen[n:], thickness[n:], cost[n:]
@@ -296,23 +297,19 @@ class _Side:
     def measured(self, lines: Lines) -> Segments:
         """Lines in millimetres, with the ends that they run on to."""
         start, stop = lines.tracks.start.copy(), lines.tracks.stop.copy()
-        extent = self.extent(lines)
+        extent = lines.extent
         np.minimum.at(start, lines.track[extent], lines.column[extent])
         np.maximum.at(stop, lines.track[extent], lines.column[extent] + 1)
-        offset, slope, _ = lines.straightness()
+        offset, slope, _ = lines.straight
         return Segments(
             start / self.mm,
             stop / self.mm,
             offset / self.mm_across,
             slope * self.mm / self.mm_across,
-            (lines.high - lines.low) / 2 / self.mm_across,
+            lines.thickness / 2 / self.mm_across,
             lines.peak,
-            lines.isolated(),
+            lines.isolated,
         )
-
-    def extent(self, lines: Lines) -> Bools:
-        """(N,) bool: columns of each line."""
-        return lines.extent(round(0.85 * self.mm))
 
     def known(self) -> Segments:
         """The rules found so far."""
@@ -324,8 +321,8 @@ class _Side:
         """(T,) bool: which lines are rules if they are long enough."""
         tracks = lines.tracks
         length = tracks.length / self.mm
-        _, slope, bend = lines.straightness()
-        isolated, absent = lines.isolated(), lines.absent()
+        _, slope, bend = lines.straight
+        isolated, absent = lines.isolated, lines.absent
         # letters in a row leave gaps; so does a worn rule, but that is long or stands alone
         is_rule = (absent <= 0.15) & (isolated >= np.where(isolated * length > 12, 0.12, 0.2))
         is_rule |= (absent <= 0.35) & (isolated >= 0.4) & (length > _LONG_MM)
@@ -334,23 +331,23 @@ class _Side:
             # the step of a typewriter's hyphens is shorter
             is_rule |= (lines.pitch >= _DASH_PITCH_MM * self.mm) & (isolated >= 0.12)
         is_rule &= lines.peak >= 0.03
-        is_rule &= lines.high - lines.low <= 1.15 * self.max_thickness
+        is_rule &= lines.thickness <= 1.15 * self.max_thickness
         is_rule &= bend / self.mm_across <= np.minimum(0.16, 0.02 + 0.0012 * length)
         is_rule &= lines.agreement(0.12 * self.mm_across) >= 0.85
         return is_rule & ((length > _LONG_MM) | (np.abs(slope - tracks.page_slope) < 0.02))
 
     def may_belong(self, lines: Lines) -> Bools:
         """(T,) bool: which lines are rules if others bear them out."""
-        _, slope, bend = lines.straightness()
+        _, slope, bend = lines.straight
         straight = (bend / self.mm_across < 0.042) & (
             np.abs(slope - lines.tracks.page_slope) < 0.03
         )
-        return straight & (lines.isolated() >= 0.3) & (lines.peak >= 0.03)
+        return straight & (lines.isolated >= 0.3) & (lines.peak >= 0.03)
 
     def ruled(self) -> list[RuledLines]:
         """The rules found, with their columns."""
         return [
-            RuledLines(lines, self.vertical, is_rule, self.extent(lines) & is_rule[lines.track])
+            RuledLines(lines, self.vertical, is_rule, lines.extent & is_rule[lines.track])
             for lines, is_rule in self.found
             if is_rule.any()
         ]
@@ -366,7 +363,7 @@ def _accept_long(sides: tuple[_Side, ...]) -> None:
         side.found = [(lines, side.stands_alone(lines)) for _, lines in measured]
         usual = _usual_thickness(side.found)
         for (chosen, lines), (_, is_rule) in zip(measured, side.found, strict=True):
-            alone = (length[chosen] > _LONG_MM) | (lines.isolated() > 0.6)
+            alone = (length[chosen] > _LONG_MM) | (lines.isolated > 0.6)
             is_rule &= alone | _is_usual(lines, usual)
             side.accepted[chosen] = is_rule
 
@@ -408,7 +405,7 @@ def _accept_short(sides: tuple[_Side, ...]) -> None:
 
 def _usual_thickness(found: list[tuple[Lines, Bools]]) -> float:
     """Of most of the ruled length, in pixels; 0.0 without a rule."""
-    thickness = [(lines.high - lines.low)[is_rule] for lines, is_rule in found]
+    thickness = [lines.thickness[is_rule] for lines, is_rule in found]
     length = [lines.tracks.length[is_rule] for lines, is_rule in found]
     if not thickness:
         return 0.0
@@ -416,4 +413,4 @@ def _usual_thickness(found: list[tuple[Lines, Bools]]) -> float:
 
 
 def _is_usual(lines: Lines, usual: float) -> Bools:
-    return np.asarray(lines.high - lines.low <= max(1.5 * usual, usual + 2))
+    return np.asarray(lines.thickness <= max(1.5 * usual, usual + 2))

@@ -20,7 +20,7 @@ runs elements labels morphology
 files pagewrite pageio
 blocks smoothing density contrast outlines shade solids relaxation threshold
 skew edges
-tracks profiles crossings removal frames ruling
+tracks strips profiles lines frames crossings dashes removal ruling
 textmeasure upright clutter neighbours baselines columns lineset pieces textlines
 places marks specks slant glyphs words reading
 holes ledger layout steps recipe clean
