@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanclean.clutter import is_hair, is_lump
+from scanclean.company import are_in_rows, fill_counters
 from scanclean.labels import Components
 from scanclean.lineset import LineSet
 from scanclean.marks import are_marks, measure_dots
@@ -93,8 +94,8 @@ def find_specks(
         x_height = float(np.median(lines.x_height))
         dots = measure_dots(places, area, measures.stroke_px * shapes.frame.aspect / x_height)
         lump = is_lump(components, shapes, measures)
-        lump &= side < 2 * np.minimum(shapes.width, shapes.height)
-        blot = small & lump & (area > _MOST_OF_DOT * dots.area)
+        stout = side < 2 * np.minimum(shapes.width, shapes.height)
+        blot = small & lump & stout & (area > _MOST_OF_DOT * dots.area)
         blot &= (places.bottom > 0.5) | (places.top < -0.2)  # on the baseline it may be a bold stop
         asked = np.flatnonzero(small & ~blot & (area < _MOST_OF_MARK * dots.area))
         speck[asked] |= ~are_marks(places, asked, area, _is_round(components, shapes), dots)
@@ -102,7 +103,11 @@ def find_specks(
         letter = _SMALLEST_LETTER * measures.x_height_px
         speck |= blot | (lone & (side < letter)) | (lone & lump & (side < 2.5 * letter))
         long = side > 2.2 * lines.x_height[places.line]
-        speck |= is_hair(components, shapes, measures) & (~places.body | long)
+        hair = is_hair(components, shapes, measures)
+        speck |= hair & (~places.body | long)
+        stroke = measures.stroke_px * shapes.frame.aspect
+        speck &= ~are_in_rows(shapes, speck & ~hair & ~lump, ~hair & ~lump, stroke=stroke)
+        speck &= ~fill_counters(shapes, speck, components.holes)
     return speck
 
 

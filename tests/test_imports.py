@@ -21,7 +21,7 @@ files pagewrite pageio
 blocks smoothing density contrast outlines shade solids relaxation threshold
 skew edges
 tracks strips profiles lines frames crossings dashes removal ruling
-textmeasure upright clutter neighbours baselines columns lineset pieces textlines
+textmeasure upright clutter company neighbours baselines columns lineset pieces textlines
 places marks specks slant glyphs words reading
 holes ledger layout steps recipe clean
 sources runlog work pool batch
