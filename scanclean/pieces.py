@@ -104,8 +104,15 @@ class Joining:
             x_height / 2,
         )
 
-    def to_lines(self) -> LineSet:
-        """Join what belongs together and drop what is no line of its own."""
+    def to_lines(self, *, least: int = 1) -> LineSet:
+        """Join what belongs together and drop what is no line of its own.
+
+        Parameters
+        ----------
+        least : int
+            Letters of a line; where it is more than one, half of them must also have some structure,
+            and they must stand close.
+        """
         for _ in range(2):
             if not self._bridge(across_columns=False):
                 break
@@ -114,6 +121,12 @@ class Joining:
             # what was dropped may have stood between two pieces
             if self.n == 0 or not (self._bridge(across_columns=True) | self._settle()):
                 break
+        if least > 1 and self.n:
+            plain = np.bincount(self.piece, self.plain, self.n)
+            left, right = self._ends()
+            inked = np.bincount(self.piece, self.shapes.width[self.letters], self.n)
+            sparse = inked < 0.5 * (right - left)  # accents over capitals stand so
+            self._drop((self._size < least) | (plain > 0.5 * self._size) | sparse)
         return self._lines(rough=False)
 
     def _settle(self) -> bool:

@@ -39,6 +39,7 @@ _RIGHT_SCALE = (0.75, 1.35)  # lines found with a measure further out are looked
 _SLOPE_TO_TURN = 0.012  # 0.7 degrees: below it rows are found as they stand
 _SIZES = 3  # sizes of type that are looked for one after the other
 _LETTERS_OF_A_SIZE = 12  # fewer left over are no further size
+_LETTERS_OF_A_LINE = 3  # and fewer are no line of one
 
 
 def find_lines(
@@ -75,7 +76,7 @@ def find_lines(
             break
         lines = _lines_of_one_size(components, spread, found, measures, free)
         found = found.with_lines(lines)
-        free &= found.assign(place(components, spread, found.frame)) < 0
+        free &= ~_taken(found, place(components, spread, found.frame))
         measures = measure_text(components, resolution, spread=spread, among=free)
     return found
 
@@ -101,7 +102,8 @@ def _lines_of_one_size(
         chosen[letters] = True
         slices = cut_slices(components, shapes, chosen, step=1.2 * x_height)
         pieces = Joining(shapes, slices, letters, n, piece, x_height, plain)
-        lines = pieces.to_lines()
+        # small type beside large is easily taken for the marks of the large, and the other way round
+        lines = pieces.to_lines(least=_LETTERS_OF_A_LINE if known.n else 1)
         if lines.n == 0 or attempt:
             break
         on_lines = weighted_median(lines.x_height, lines.baselines.size)
@@ -109,6 +111,16 @@ def _lines_of_one_size(
             break
         x_height = on_lines
     return lines
+
+
+def _taken(lines: LineSet, shapes: Shapes) -> Bools:
+    """(C,) which components are letters of the lines: they stand about the middle of one."""
+    line = lines.assign(shapes)
+    on_line = np.flatnonzero(line >= 0)
+    level = lines.levels(line[on_line], shapes.x[on_line], shapes.y[on_line])
+    taken = np.zeros(line.size, bool)
+    taken[on_line] = (level > -0.3) & (level < 1.2)
+    return taken
 
 
 def _bodies(shapes: Shapes, x_height: float) -> Bools:
