@@ -311,7 +311,7 @@ class _Text:
         """Go on without the specks; the lines were found without them."""
         if speck.any():
             self.components = self.components.select(~speck)
-            self.spread = measure_spread(self.components)
+            self.spread = self.spread.select(~speck)
 
 
 # ---- what is told about the page

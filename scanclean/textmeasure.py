@@ -11,7 +11,7 @@ are pixels of y and widths pixels of x.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -76,6 +76,10 @@ class Spread:
     xx: Floats
     xy: Floats
     yy: Floats
+
+    def select(self, chosen: Bools) -> Spread:
+        """Those that a (C,) bool array chooses."""
+        return Spread(*(getattr(self, each.name)[chosen] for each in fields(self)))
 
     def core(self, slope: float) -> Floats:
         """(C,) height that the bulk of the ink fills, measured across lines of a slope.
