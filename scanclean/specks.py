@@ -33,6 +33,10 @@ Bools = NDArray[np.bool_]
 _MOST_OF_DOT = 4.0  # a solid lump of more dots' area is no dot
 _MOST_OF_MARK = 8.0  # dots; what is larger is writing of some kind
 _SMALLEST_LETTER = 0.8  # x-heights
+_DOUBTFUL = (0.3, 8.0)  # dots' areas: what is as large as a mark but stands where none does
+_SURPLUS = 3.0  # so much more of it in the lines than elsewhere is writing that is not understood
+_ZONE = 4.2  # height of a line's zone in x-heights
+_MOST_TEXT = 0.8  # of the page
 _SURE_PIXELS = 12  # smaller components show no shape
 _USUAL_DPI = 300.0
 _MM_WITHOUT_TEXT = 0.2  # on a page without text what is smaller than this is dirt
@@ -98,8 +102,14 @@ def find_specks(
         blot = small & lump & stout & (area > _MOST_OF_DOT * dots.area)
         blot &= (places.bottom > 0.5) | (places.top < -0.2)  # on the baseline it may be a bold stop
         asked = np.flatnonzero(small & ~blot & (area < _MOST_OF_MARK * dots.area))
-        speck[asked] |= ~are_marks(places, asked, area, _is_round(components, shapes), dots)
+        unfit = asked[~are_marks(places, asked, area, _is_round(components, shapes), dots)]
         lone = places.line < 0
+        least, most = (k * dots.area * x_height**2 / shapes.frame.aspect for k in _DOUBTFUL)
+        doubtful = unfit[(components.area[unfit] >= least) & (components.area[unfit] <= most)]
+        elsewhere = lone & (components.area >= least) & (components.area <= most)
+        if doubtful.size > _SURPLUS * _expected(lines, components, int(elsewhere.sum())):
+            unfit = np.setdiff1d(unfit, doubtful)
+        speck[unfit] = True
         letter = _SMALLEST_LETTER * measures.x_height_px
         speck |= blot | (lone & (side < letter)) | (lone & lump & (side < 2.5 * letter))
         long = side > 2.2 * lines.x_height[places.line]
@@ -109,6 +119,19 @@ def find_specks(
         speck &= ~are_in_rows(shapes, speck & ~hair & ~lump, ~hair & ~lump, stroke=stroke)
         speck &= ~fill_counters(shapes, speck, components.holes)
     return speck
+
+
+def _expected(lines: LineSet, components: Components, elsewhere: int) -> float:
+    """How many pieces of dirt stand in the text lines if it lies everywhere alike.
+
+    One more than was seen elsewhere is counted, so that a page with next to no room elsewhere is
+    taken for a dirty one.
+    """
+    height, width = components.runs.shape
+    long = lines.right - lines.left + lines.x_height
+    text = float((long * lines.x_height).sum()) * _ZONE / lines.frame.aspect
+    text = min(text, _MOST_TEXT * height * width)
+    return (elsewhere + 1) * text / (height * width - text)
 
 
 def _is_round(components: Components, shapes: Shapes) -> Bools:

@@ -38,13 +38,6 @@ SCANS = [
     if path.name != "before-after.png"
     for number in range(1, count_pages(path) + 1)
 ]
-MARKS_LOST = {
-    "cargo-ledger.png": pytest.mark.xfail(reason="dots in zeros are taken for dirt", strict=False),
-    "pilots-licence.png": pytest.mark.xfail(
-        reason="an i of a hand on a form loses its dot", strict=False
-    ),
-}
-BY_LINES = pytest.mark.xfail(reason="skew is told by the text lines' own slope, not measured")
 LEAST_PIECE = 4  # pixels; specks of coverage at the ends of strokes are less
 DPI_300 = Resolution(300, 300)
 
@@ -142,9 +135,7 @@ def test_laws_and_crops_of_every_fixture(path, number):
     assert np.array_equal(together, page.ink.to_mask().view(np.uint8))
 
 
-@pytest.mark.parametrize(
-    "name", [pytest.param(name, marks=MARKS_LOST.get(name, ())) for name in DRAWN]
-)
+@pytest.mark.parametrize("name", DRAWN)
 def test_no_piece_of_a_letter_is_lost_from_a_fixture(name):
     """Dots, commas and accents, dots of zeros, what a worn type left of its letter."""
     drawn = draw(**DRAWN[name])
@@ -349,19 +340,10 @@ SKEWED = {
     "form": ("form", {}, -0.7),
     "table": ("tides", {}, 3.0),
 }
-LINES_MISS = ("ledger", "ledger, hardly askew", "hand", "table")
 
 
-@pytest.mark.parametrize(
-    ("page", "straighten"),
-    [
-        pytest.param(
-            page, straighten, marks=BY_LINES if page in LINES_MISS and not straighten else ()
-        )
-        for page in SKEWED
-        for straighten in (True, False)
-    ],
-)
+@pytest.mark.parametrize("page", SKEWED)
+@pytest.mark.parametrize("straighten", [True, False])
 def test_skew_of_pages_of_every_kind(page, straighten):
     kind, options, skew = SKEWED[page]
     drawn = draw(kind, seed=9, size=(120.0, 90.0), skew=skew, **options)
