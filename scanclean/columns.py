@@ -28,6 +28,8 @@ Bools = NDArray[np.bool_]
 
 _LONG_LINE = 14.0  # of the letters' height: cells of a table are shorter as a rule
 _RUNNING_LINE = 20.0  # and these are surely no cells
+_MANY_ROWS = 6
+_CLEAR_GUTTER = 2.6  # what fewer rows must have between them
 _REACH = 12.0  # how far above and below a gap its corridor is followed, in letters' heights
 _LOOK = 24  # pieces further down the page that are tried as the next below
 
@@ -241,10 +243,15 @@ def _are_columns(
     ours, theirs = (s[(y > top) & (y < bottom)] for s, y in zip(whole, level, strict=True))
     # two rows of a note tell, beside running text; two cells beside two cells do not
     running = any(s.size >= 5 and pieces.are_long(s, _RUNNING_LINE) for s in whole)
-    if min(ours.size, theirs.size) < (2 if running else 3):
+    rows = min(ours.size, theirs.size)
+    if rows < (2 if running else 3):
         return None
     gutter = np.quantile(left[theirs], 0.1) - np.quantile(right[ours], 0.9)
-    if gutter <= 0.5 * height:
+    # a few rows have their word spaces under one another by chance
+    many = rows >= 3 and max(s.size for s in whole) >= _MANY_ROWS
+    sizes = [float(np.median(lines.height[s])) for s in whole]
+    many |= running and max(sizes) > 1.2 * min(sizes)  # notes in small type
+    if gutter <= (0.5 if many else _CLEAR_GUTTER) * height:
         return False
     if pieces.are_long(ours, _LONG_LINE) and pieces.are_long(theirs, _LONG_LINE):
         return True

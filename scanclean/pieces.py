@@ -26,7 +26,7 @@ _BAND = 0.2
 _UNLIKE = 2.0  # letters of one line differ less in height, capital and bracket from lower case
 _UNLIKE_BESIDE = 2.7  # long f and swung capitals to the next letter
 _WORD_SPACE = 1.6  # gaps up to this are never asked whether they part columns
-_SURE_GAP = 2.6  # and up to this, if no corridor runs there
+_SURE_GAP = 2.0  # and up to this, if no corridor runs there
 _LARGEST_GAP = 14.0  # that one row alone can bridge
 _LARGEST_TAB = 40.0  # that the rows of a table can bridge
 

@@ -34,7 +34,7 @@ __all__ = ["LineSet", "find_lines"]
 Bools = NDArray[np.bool_]
 
 _SMALLEST_BODY = 0.45  # letters, in x-heights
-_LARGEST_BODY = 8.0
+_LARGEST_BODY = 10.0
 _RIGHT_SCALE = (0.75, 1.35)  # lines found with a measure further out are looked for again
 _SLOPE_TO_TURN = 0.012  # 0.7 degrees: below it rows are found as they stand
 _SIZES = 3  # sizes of type that are looked for one after the other
