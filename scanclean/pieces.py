@@ -110,8 +110,8 @@ class Joining:
         Parameters
         ----------
         least : int
-            Letters of a line; where it is more than one, half of them must also have some structure,
-            and they must stand close.
+            Letters of a line; where it is more than one, they must also stand close, and half of
+            them have some structure.
         """
         for _ in range(2):
             if not self._bridge(across_columns=False):

@@ -102,7 +102,7 @@ def _lines_of_one_size(
         chosen[letters] = True
         slices = cut_slices(components, shapes, chosen, step=1.2 * x_height)
         pieces = Joining(shapes, slices, letters, n, piece, x_height, plain)
-        # small type beside large is easily taken for the marks of the large, and the other way round
+        # small type beside large is easily taken for marks of the large, and the other way round
         lines = pieces.to_lines(least=_LETTERS_OF_A_LINE if known.n else 1)
         if lines.n == 0 or attempt:
             break
