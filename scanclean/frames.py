@@ -13,13 +13,17 @@ from typing import TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
+from scanclean.smoothing import weighted_median
+
 __all__ = ["Segments", "hatched", "short_rules", "worth_measuring"]
 
 Bools = NDArray[np.bool_]
 Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
 
 _JOINT_MM = 0.45  # between the end of a line and the line it stands on
 _BOX_SIDES = 6  # like sides of boxes in a row that no rule joins: a row of three at least
+_STEM_MM = 8.0  # letters that fill in forms are not as tall
 _TICK_PITCH_MM = 3.2  # the closest ticks; characters of a typewriter stand closer
 _CLEAR = 0.6  # isolated: what half of a row's ticks are at least
 _ROW_MM = 40.0  # ticks of one row are compared within this
@@ -65,8 +69,8 @@ class Segments:
         """(n,) float: across, at half length."""
         return np.asarray(self.offset + self.slope * (self.start + self.stop) / 2)
 
-    def select(self, chosen: Bools) -> Segments:
-        """Those that a (n,) bool array chooses."""
+    def select(self, chosen: Bools | Ints) -> Segments:
+        """Those that a (n,) bool array or their numbers choose."""
         return Segments(*(getattr(self, f.name)[chosen] for f in fields(self)))
 
     @classmethod
@@ -101,14 +105,20 @@ def short_rules(lines: Pair, rules: Pair) -> tuple[Bools, Bools]:
     -------
     pair of (n,) bool arrays
     """
-    closed, joined = close_frames(lines, rules)
+    made = [_made_alike(lines[d], Segments.joined(*rules)) for d in (0, 1)]
+    row = [alike(lines[d], _lean(rules[d], rules[1 - d])) for d in (0, 1)]
+    likely = [made[d] & _side_like(lines[d], row[d]) for d in (0, 1)]
+    found = close_frames((lines[0].select(likely[0]), lines[1].select(likely[1])), rules)
+    closed, joined = ([np.zeros(len(side), bool) for side in lines] for _ in range(2))
+    for d in (0, 1):
+        closed[d][likely[d]], joined[d][likely[d]] = found[0][d], found[1][d]
     boxes = []
     for d in (0, 1):
-        in_row = (alike(lines[d]) & closed[d] & closed[d][:, None]).sum(axis=1) >= _BOX_SIDES
+        in_row = (row[d] & closed[d] & closed[d][:, None]).sum(axis=1) >= _BOX_SIDES
         boxes.append(joined[d] | in_row)
     frames = [Segments.joined(rules[d], lines[d].select(boxes[d])) for d in (0, 1)]
-    found = [boxes[d] | find_ticks(lines[d], frames[1 - d]) for d in (0, 1)]
-    return found[0], found[1]
+    ticks = [find_ticks(lines[d], frames[1 - d], row[d]) for d in (0, 1)]
+    return boxes[0] | ticks[0], boxes[1] | ticks[1]
 
 
 def meets(lines: Segments, others: Segments) -> Bools:
@@ -147,19 +157,21 @@ def close_frames(lines: Pair, rules: Pair) -> tuple[tuple[Bools, Bools], tuple[B
     from scipy.sparse import coo_array
     from scipy.sparse.csgraph import connected_components
 
-    on_rule = [meets(lines[d], rules[1 - d]).any(axis=2) for d in (0, 1)]
+    on_rule = [np.any(meets(lines[d], rules[1 - d]), axis=2) for d in (0, 1)]
     on_line = [meets(lines[d], lines[1 - d]) for d in (0, 1)]
     alive = [np.ones(len(side), bool) for side in lines]
     left = -1
     while left != (left := int(alive[0].sum() + alive[1].sum())):
         for d in (0, 1):
-            held = on_rule[d] | (on_line[d] & alive[1 - d]).any(axis=2)
-            alive[d] &= held.all(axis=1)
+            held = np.any(on_line[d] & alive[1 - d], axis=2) | on_rule[d]
+            alive[d] &= np.all(held, axis=1)
 
     n = [len(side) for side in lines]
     known = n[0] + n[1]  # one node for all rules
-    pairs = [np.argwhere(on_line[d].any(axis=1) & alive[d][:, None] & alive[1 - d]) for d in (0, 1)]
-    hung = [np.flatnonzero(on_rule[d].any(axis=1) & alive[d]) for d in (0, 1)]
+    pairs = [
+        np.argwhere(np.any(on_line[d], axis=1) & alive[d][:, None] & alive[1 - d]) for d in (0, 1)
+    ]
+    hung = [np.flatnonzero(np.any(on_rule[d], axis=1) & alive[d]) for d in (0, 1)]
     i = np.concatenate((pairs[0][:, 0], n[0] + pairs[1][:, 0], hung[0], n[0] + hung[1]))
     j = np.concatenate(
         (n[0] + pairs[0][:, 1], pairs[1][:, 1], np.full(hung[0].size + hung[1].size, known))
@@ -171,8 +183,36 @@ def close_frames(lines: Pair, rules: Pair) -> tuple[tuple[Bools, Bools], tuple[B
     return (alive[0], alive[1]), joined
 
 
-def alike(lines: Segments) -> Bools:
+def _made_alike(lines: Segments, rules: Segments) -> Bools:
+    """(n,) bool: lines as thick and as dark as some rule."""
+    same = np.abs(rules.half - lines.half[:, None]) <= 0.05 + 0.25 * rules.half
+    same &= np.abs(rules.peak - lines.peak[:, None]) <= 0.35 * rules.peak
+    return np.any(same, axis=1)
+
+
+def _side_like(lines: Segments, row: Bools) -> Bools:
+    """(n,) bool: lines longer than stems of letters, or free of feet and bars as stems are not.
+
+    A stroke may hide a side; then others in its row speak for it.
+    """
+    clear = (lines.isolated >= _CLEAR) | (lines.length >= _STEM_MM)
+    return clear | ((row & clear).sum(axis=1) >= np.maximum(2, row.sum(axis=1) / 2))
+
+
+def _lean(rules: Segments, others: Segments) -> float:
+    """Slope that most of the ruled length has; the other direction's has the opposite sign."""
+    slope = np.concatenate((rules.slope, -others.slope))
+    return weighted_median(slope, np.concatenate((rules.length, others.length)) ** 2)
+
+
+def alike(lines: Segments, lean: float) -> Bools:
     """Lines of one make that stand in a row: ends level, thickness and density the same.
+
+    Parameters
+    ----------
+    lines : Segments
+    lean : float
+        Slope of the page in this direction; what is level is at right angles to it.
 
     Returns
     -------
@@ -181,13 +221,15 @@ def alike(lines: Segments) -> Bools:
     """
     apart = np.abs(lines.middle[:, None] - lines.middle)
     level = 0.42 + 0.015 * apart
-    same = (apart < _ROW_MM) & (np.abs(lines.start[:, None] - lines.start) < level)
-    same &= np.abs(lines.stop[:, None] - lines.stop) < level
+    same = apart < _ROW_MM
+    for end in (lines.start, lines.stop):
+        upright = end + lean * lines.middle
+        same &= np.abs(upright[:, None] - upright) < level
     same &= np.abs(lines.half[:, None] - lines.half) < 0.04 + 0.1 * lines.half
     return np.asarray(same & (np.abs(lines.peak[:, None] - lines.peak) < 0.25 * lines.peak))
 
 
-def find_ticks(lines: Segments, rules: Segments) -> Bools:
+def find_ticks(lines: Segments, rules: Segments, row: Bools) -> Bools:
     """Ticks of combs: in even rows of four and more, each with an end on a rule of its make.
 
     Parameters
@@ -195,16 +237,18 @@ def find_ticks(lines: Segments, rules: Segments) -> Bools:
     lines : Segments
     rules : Segments
         Of the other direction.
+    row : (n, n) bool array
+        As of `alike`.
 
     Returns
     -------
     (n,) bool array
     """
-    stands = meets(lines, rules).any(axis=1)
+    stands = np.any(meets(lines, rules), axis=1)
     make = np.abs(rules.half - lines.half[:, None]) <= 0.05 + 0.25 * rules.half
     make &= np.abs(rules.peak - lines.peak[:, None]) <= 0.35 * rules.peak
-    stands = (stands & make).any(axis=1)
-    rows = alike(lines) & stands & stands[:, None]
+    on_rule = np.any(stands & make, axis=1)
+    rows = row & on_rule & on_rule[:, None]
     # stems of letters have feet and bars
     clear = (rows & (lines.isolated >= _CLEAR)).sum(axis=1)
     ticks = (rows.sum(axis=1) >= 4) & (2 * clear >= rows.sum(axis=1))
@@ -233,10 +277,19 @@ def hatched(lines: Segments) -> Bools:
     from scipy.sparse import csr_array
     from scipy.sparse.csgraph import connected_components
 
-    overlap = np.minimum(lines.stop[:, None], lines.stop)
-    overlap = overlap - np.maximum(lines.start[:, None], lines.start)
-    along = (lines.start + lines.stop) / 2
-    apart = np.abs(lines.offset[:, None] + lines.slope[:, None] * along - lines.middle)
-    like = (overlap > 0.8 * lines.length[:, None]) & (overlap > 0.8 * lines.length)
-    _, thicket = connected_components(csr_array(like & (apart < _HATCH_MM)), directed=False)
-    return np.asarray(np.bincount(thicket)[thicket] >= _HATCH_LINES)
+    # pairs of lines near each other, by their places across
+    if len(lines) == 0:
+        return np.zeros(0, bool)
+    order = np.argsort(lines.middle, kind="stable")
+    near = lines.select(order)
+    place, n = near.middle, order.size
+    count = np.searchsorted(place, place + _HATCH_MM, side="right") - np.arange(n) - 1
+    i = np.repeat(np.arange(n), count)
+    j = i + 1 + np.arange(i.size) - np.repeat(np.cumsum(count) - count, count)
+    overlap = np.minimum(near.stop[i], near.stop[j]) - np.maximum(near.start[i], near.start[j])
+    like = overlap > 0.8 * np.maximum(near.length[i], near.length[j])
+    graph = csr_array((np.ones(int(like.sum()), np.int8), (i[like], j[like])), shape=(n, n))
+    _, thicket = connected_components(graph, directed=False)
+    found = np.zeros(n, bool)
+    found[order] = np.bincount(thicket, minlength=1)[thicket] >= _HATCH_LINES
+    return found

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,6 +25,7 @@ Bytes = NDArray[np.uint8]
 Floats = NDArray[np.float64]
 Singles = NDArray[np.float32]
 Ints = NDArray[np.int64]
+_Number = TypeVar("_Number", np.float32, np.uint8)
 
 _RUN_MM = 0.85  # of clean line: an end runs on to the last such stretch
 _NEAR_PX, _FAR_PX = 0.3, 2.3  # beside the line, where strokes come out of it
@@ -239,8 +241,7 @@ def measure_lines(
     strips = cut_strips(page, table, tracks, mm=mm, reach=reach)
     pool = pools(strips, mm)
     ones = np.ones(strips.track.size)
-    # 1. a first profile from the blocks without strokes beside the line; where there are hardly
-    #    any (a second line runs there), from those with the least
+    # 1. a first profile from the blocks without strokes beside the line
     profiles = mean_profiles(strips, pool, _clear_blocks(strips, stroke), ones)
     columns = _weighed(strips, profiles, ones, stroke)
     # 2. with the amplitudes that it gives, a better one
@@ -279,11 +280,14 @@ def measure_lines(
 
 
 def _clear_blocks(strips: Strips, stroke: float) -> Bools:
+    """(B,) bool: blocks with no stroke beside the line; what is there all along is none."""
     u = np.abs(np.arange(strips.samples) - strips.shift[:, None]) - strips.reach
     flank = np.where((u > 1.5) & (u < 4), strips.block, 0).max(axis=1)
     home, n = strips.home, len(strips.tracks)
-    least = np.nan_to_num(group_quantile(flank[home], strips.track[home], n, 0.3))
-    return np.asarray(home & (flank <= np.maximum(stroke, least)[strips.track]))
+    always = np.nan_to_num(group_quantile(flank[home], strips.track[home], n, 0.3))
+    # where the line falls on the pixels changes what a second line beside it adds to the flank
+    limit = np.where(always > stroke, 1.3 * always + stroke, stroke)
+    return np.asarray(home & (flank <= limit[strips.track]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -305,24 +309,21 @@ def _weighed(strips: Strips, profiles: Profiles, amplitude: Floats, stroke: floa
     density = strips.density.reshape(-1, strips.samples)
     on_page = strips.on_page.ravel()
 
-    def rows(bank: NDArray[np.generic]) -> NDArray[np.generic]:
-        return bank.reshape(-1, strips.samples).take(place, axis=0)
-
     line = np.where(profiles.inside, profiles.laid(profiles.line), 0)
     power = np.maximum((line**2).sum(axis=2), 1e-9)
     ground = np.where(profiles.inside, profiles.laid(profiles.full - profiles.line), 0)
     weight = (line / power[:, :, None]).astype(np.float32)
-    strength = np.einsum("ij,ij->i", density, rows(weight)).astype(float)
+    strength = np.einsum("ij,ij->i", density, _rows(weight, place)).astype(float)
     strength -= ((ground * line).sum(axis=2) / power).ravel()[place]
     # strokes are darker than the profile has it beside the line
-    excess = rows(profiles.laid(profiles.full).astype(np.float32))
+    excess = _rows(profiles.laid(profiles.full).astype(np.float32), place)
     excess *= np.repeat(amplitude, strips.width).astype(np.float32)[:, None]
     np.subtract(density, excess, out=excess)
     low, high = (edge[:, None, None] for edge in profiles.extent)
     above, below = low - profiles.pixel_u, profiles.pixel_u - high
     flank = np.where((above > _NEAR_PX) & (above < _FAR_PX), _CROSSED_ABOVE, 0)
     flank += np.where((below > _NEAR_PX) & (below < _FAR_PX), _CROSSED_BELOW, 0)
-    crossed = np.where(excess > stroke, rows(flank.astype(np.uint8)), np.uint8(0))
+    crossed = np.where(excess > stroke, _rows(flank.astype(np.uint8), place), np.uint8(0))
     crossed = np.bitwise_or.reduce(crossed, axis=1)
     core = on_page & strips.within.ravel()
     return _Columns(
@@ -333,6 +334,11 @@ def _weighed(strips: Strips, profiles: Profiles, amplitude: Floats, stroke: floa
         free=~_grown(crossed > 0, 2) & on_page,
         bridged=(crossed == _CROSSED_ABOVE | _CROSSED_BELOW) & core,
     )
+
+
+def _rows(bank: NDArray[_Number], place: Ints) -> NDArray[_Number]:
+    """(N, K): each column's row of a (T, F, K) bank."""
+    return bank.reshape(-1, bank.shape[-1]).take(place, axis=0)
 
 
 def _levels(strips: Strips, columns: _Columns, pool: Ints) -> tuple[Floats, Floats, Bools]:

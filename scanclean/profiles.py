@@ -51,7 +51,7 @@ class Profiles:
     @property
     def half(self) -> int:
         """Whole rows on each side of the middle one."""
-        return (self.full.shape[1] // _OVERSAMPLING - 1) // 2
+        return (int(self.full.shape[1]) // _OVERSAMPLING - 1) // 2
 
     @cached_property
     def line(self) -> Floats:
@@ -65,7 +65,7 @@ class Profiles:
         across = np.clip((self.u + reach + 1) / (2 * reach + 2), 0, 1)
         ground = left[:, None] * (1 - across) + right[:, None] * across
         has_ground = np.maximum(left, right) < 0.5 * peak
-        return np.maximum(self.full - ground * has_ground[:, None], 0)
+        return np.asarray(np.maximum(self.full - ground * has_ground[:, None], 0))
 
     @cached_property
     def peak(self) -> Floats:
@@ -112,7 +112,7 @@ class Profiles:
         """(N,) int64: row in a (T F, K) bank for lines whose centres are `shift` rows down."""
         n_phases = self.pixel_u.shape[0]
         phase = np.rint((shift - self.half + 0.5) * _PHASES).astype(np.int64)
-        return track * n_phases + np.clip(phase, 0, n_phases - 1)
+        return np.asarray(track * n_phases + np.clip(phase, 0, n_phases - 1))
 
     def laid(self, profile: Floats) -> Floats:
         """(T, F, K) float: (T, P) profiles at the pixels, in every phase."""

@@ -8,6 +8,7 @@ what the page has beyond it is the stroke's. Where there is no tone to tell, sha
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,6 +27,7 @@ Bools = NDArray[np.bool_]
 Bytes = NDArray[np.uint8]
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+_Pixel = TypeVar("_Pixel", np.bool_, np.uint8)
 
 _INK = 0.1  # residual density of a stroke
 _SIGMAS = 3.2
@@ -33,6 +35,7 @@ _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a densi
 _CROSSED = 12  # columns that tell what strokes add on a rule
 _AS_DARK = 0.15  # difference of density
 _FRINGE_PX = 1.0  # beside a line, still judged by its profile
+_BLACK = 1.75  # density: of a few grey levels, so nothing darker can be told
 _STEPS = 100.0  # of density in a byte
 _SPECK_MM2, _CROSSING_MM2 = 0.1, 0.5  # loose pieces that are a stroke's, at crossings of rules too
 _THIN = 1.8  # pixels: nothing drawn on purpose is thinner and stands alone
@@ -63,7 +66,7 @@ class RuledLines:
     is_rule: Bools
     live: Bools
 
-    def turned(self, page: NDArray[np.generic]) -> NDArray[np.generic]:
+    def turned(self, page: NDArray[_Pixel]) -> NDArray[_Pixel]:
         """A view of the page in which the lines run along the rows."""
         return page.T if self.vertical else page
 
@@ -161,6 +164,7 @@ def _saturated(ruled: list[RuledLines], flags: Bytes, noise: float) -> list[Bool
                 some = np.abs(all_peaks - peak) < _AS_DARK
             if np.count_nonzero(some) >= _CROSSED:
                 saturated[i] = np.quantile(all_added[some], 0.75) < _margin(peak, noise)
+            saturated[i] |= peak > _BLACK
         by_shape.append(saturated)
     return by_shape
 
@@ -172,6 +176,7 @@ def _is_darker(ratio: Bytes, predicted: Bytes, flag: Bytes, noise: float) -> Boo
     margin = _margin(rule, noise)
     darkest = 255 * 10.0 ** -(rule + margin)
     darkest_sure = 255 * 10.0 ** -(rule + 1.5 * margin)
+    darkest[rule > _BLACK] = darkest_sure[rule > _BLACK] = 0
     return ratio < np.where(flag & _DOUBTFUL, darkest[predicted], darkest_sure[predicted])
 
 

@@ -39,12 +39,15 @@ _REACH_MM, _SHORT_REACH_MM = 13.0, 3.0  # how far ends may run on
 _FAINTEST = 0.92  # of the paper: what is darker may be a rule, faded ones included
 _STEADY, _STEADY_SHORT = 0.22, 0.35  # roughness; letters in a row have 0.27 and more
 _DASH_PITCH_MM = 3.0
+_SKEW_MARGIN = 0.5  # degrees: rules are not all parallel
+_MOST_SHORT = 1500  # lines
 _BATCH = 1 << 21  # samples measured at a time
 
 _STROKE = 0.1  # density in a line's flank from which on it is a stroke
 _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a density
 
 _POINT_PX = 16  # between the points of a rule's centre
+_LEAST_INK = 0.05  # of a rule's centre
 
 # of a bitonal scan the share of ink along a line stands for density
 _COVER = (0.8 * (1 - np.arange(256) / 255)).astype(np.float32)
@@ -161,12 +164,13 @@ def find_rules(
         if settings.directions in ("both", "vertical" if side.vertical else "horizontal")
     )
     ruled = [part for side in wanted for part in side.ruled()]
-    taken, records = nothing, []
+    taken = nothing
+    records: list[Rule] = []
     if ruled:
         ratio = None if tone is None else tone.ratio
         taken, by_shape = rule_pixels(ink, ratio, noise or 0.0, ruled, resolution)
         for part, chosen in zip(ruled, by_shape, strict=True):
-            records += _records(part, chosen)
+            records += _records(part, chosen, ink)
     if settings.dashed:
         dashed, marks = find_dashes(
             ink - taken,
@@ -201,16 +205,20 @@ def _record_of(rule: DashedRule) -> Rule:
     return Rule(direction, rule.box, rule.thickness_px, 1.0, "shape", rule.centre, rule.dash)
 
 
-def _records(part: RuledLines, by_shape: Bools) -> Iterator[Rule]:
+def _records(part: RuledLines, by_shape: Bools, ink: RunSet) -> Iterator[Rule]:
+    """One record a rule; a fold or an edge of light that left no ink is none."""
     lines = part.lines
     thickness = lines.profiles.even_thickness(lines.level)
     low, high = lines.profiles.extent
     for i in np.flatnonzero(part.is_rule):
         place = lines.begin[i] + np.flatnonzero(part.live[lines.begin[i] : lines.begin[i + 1]])
         column, centre = lines.column[place], lines.centre[place]
+        x, y = column, np.rint(centre).astype(np.int64)
+        if _covered(ink, *((y, x) if part.vertical else (x, y))) < _LEAST_INK:
+            continue
         left, right = int(column[0]), int(column[-1]) + 1
         top = max(0, int(np.floor(centre.min() + low[i] + 0.5)))
-        bottom = int(np.ceil(centre.max() + high[i] + 0.5))
+        bottom = min(ink.shape[part.vertical], int(np.ceil(centre.max() + high[i] + 0.5)))
         some = np.append(np.arange(0, place.size - 1, _POINT_PX), place.size - 1)
         points = np.stack((column[some], centre[some]), axis=1) + 0.5
         yield Rule(
@@ -221,6 +229,12 @@ def _records(part: RuledLines, by_shape: Bools) -> Iterator[Rule]:
             "shape" if by_shape[i] else "density",
             points[:, ::-1] if part.vertical else points,
         )
+
+
+def _covered(ink: RunSet, x: Ints, y: Ints) -> float:
+    """Share of the points that are ink."""
+    before = np.searchsorted(ink.bounds, y * (ink.shape[1] + 1) + x, side="right")
+    return float((before % 2).mean())
 
 
 # ---- which lines are rules
@@ -253,7 +267,7 @@ class _Side:
             max_thickness=self.max_thickness,
         )
         leaning = np.abs(tracks.slope) * self.mm / self.mm_across
-        self.tracks = tracks.select(leaning <= np.tan(np.radians(settings.max_skew)))
+        self.tracks = tracks.select(leaning <= np.tan(np.radians(settings.max_skew + _SKEW_MARGIN)))
         self.segments = Segments(
             self.tracks.start / self.mm,
             self.tracks.stop / self.mm,
@@ -380,7 +394,9 @@ def _accept_short(sides: tuple[_Side, ...]) -> None:
         fits = (length >= _SHORT_MM) & (length < _DOUBTFUL_MM) & ~side.in_thicket
         fits &= (tracks.roughness < _STEADY_SHORT) & (tracks.thickness <= usual + 4)
         fits &= np.abs(tracks.slope - tracks.page_slope) < 0.04
-        chosen.append(np.flatnonzero(fits & ~side.accepted))
+        some = np.flatnonzero(fits & ~side.accepted)
+        # of too many the longest: they are compared in pairs
+        chosen.append(np.sort(some[np.argsort(-length[some], kind="stable")[:_MOST_SHORT]]))
     near = worth_measuring(
         (sides[0].segments.select(chosen[0]), sides[1].segments.select(chosen[1])), known
     )

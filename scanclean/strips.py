@@ -31,6 +31,7 @@ _LOW_MEDIAN = 0.4  # the quantile taken of a block's columns: strokes are dark
 _STIFF_BLOCK = 16  # stiffnesses are for blocks of so many columns
 _GUESS_STIFFNESS, _CENTRE_STIFFNESS = 30.0, (20.0, 8.0)
 _GUESS_PX, _CENTRE_PX = 0.7, 0.25  # deviations that count half
+_FRINGE_PX = 1.25  # beyond the thickness of a track
 _STROKE = 0.12  # density beside the line
 
 
@@ -79,7 +80,7 @@ class Strips:
     @property
     def width(self) -> int:
         """W, the columns of a block."""
-        return self.column.shape[1]
+        return int(self.column.shape[1])
 
     @property
     def samples(self) -> int:
@@ -200,7 +201,7 @@ def _sharpened(strips: Strips, stiffness: float) -> Strips:
     flanks = [np.where(beside & side, block, 0) for side in (u < 0, u > 0)]
     count = [np.maximum((beside & side).sum(axis=1), 1) for side in (u < 0, u > 0)]
     ground = np.minimum(flanks[0].sum(axis=1) / count[0], flanks[1].sum(axis=1) / count[1])
-    line = np.maximum(block - ground[:, None], 0) * (np.abs(u) <= strips.reach + 2)
+    line = np.maximum(block - ground[:, None], 0) * (np.abs(u) <= strips.reach + _FRINGE_PX)
     mass = line.sum(axis=1)
     centroid = (line * u).sum(axis=1) / np.maximum(mass, 1e-6)
     moment = (line * (u - centroid[:, None]) ** 2).sum(axis=1)
@@ -210,7 +211,10 @@ def _sharpened(strips: Strips, stiffness: float) -> Strips:
     usual_spread = np.nan_to_num(group_quantile(spread[heavy], track[heavy], n), nan=1.0)
     counts = np.minimum(mass / np.maximum(usual[track], 1e-6), 1)
     counts *= spread < 1.25 * usual_spread[track] + 0.1
-    counts *= np.maximum(flanks[0], flanks[1]).max(axis=1) < _STROKE
+    # what is beside the line all along is another line, not a stroke
+    flank = np.maximum(flanks[0], flanks[1]).max(axis=1)
+    always = np.nan_to_num(group_quantile(flank[home], track[home], n, 0.3))
+    counts *= flank < _STROKE + always[track]
     counts += 1e-4
     weight = counts
     for _ in range(3):

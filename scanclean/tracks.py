@@ -26,6 +26,8 @@ _CELLS_PER_MM = 3.0
 _GAP_MM = 6.0
 _GAP_SHARE = 0.45  # of the shorter of two pieces
 _OVERLAP_MM = 3.0
+_LONG_MM = 12.0  # from here a track shows the direction of the page's rules
+_LEANING = 0.015  # slope at which a second look is worth its time
 _LINK_MM, _LINK_PX, _LINK_DRIFT = 0.135, 1.2, 0.012
 
 
@@ -74,7 +76,7 @@ class Tracks:
         """(T,) int64: columns from end to end."""
         return self.stop - self.start
 
-    def row_at(self, column: NDArray[np.generic] | float) -> Floats:
+    def row_at(self, column: Floats | Ints | float) -> Floats:
         """Row of each track's straight line at a column (scalar, (T,) or (T, k) with (T, 1))."""
         return np.asarray(self.offset + self.slope * column)
 
@@ -84,10 +86,19 @@ class Tracks:
         picked = np.arange(len(self))[chosen]
         number[picked] = np.arange(picked.size)
         mine = number[self.knot_track] >= 0
-        columns = (self.start, self.stop, self.offset, self.slope, self.thickness, self.covered)
-        columns += (self.roughness,)
-        knots = number[self.knot_track][mine], self.knot_x[mine], self.knot_y[mine]
-        return Tracks(*(c[picked] for c in columns), *knots, self.page_slope)
+        return Tracks(
+            start=self.start[picked],
+            stop=self.stop[picked],
+            offset=self.offset[picked],
+            slope=self.slope[picked],
+            thickness=self.thickness[picked],
+            covered=self.covered[picked],
+            roughness=self.roughness[picked],
+            knot_track=number[self.knot_track][mine],
+            knot_x=self.knot_x[mine],
+            knot_y=self.knot_y[mine],
+            page_slope=self.page_slope,
+        )
 
 
 def find_tracks(
@@ -123,6 +134,32 @@ def find_tracks(
     """
     cell = max(1, round(mm_along / _CELLS_PER_MM))
     reduced = _reduce_along(page, cell)
+    upright = np.zeros(reduced.shape[1], np.int64)
+    tracks = _find(reduced, upright, cell, page.shape[1], mm_along, mm_across, level, max_thickness)
+    long = tracks.length > _LONG_MM * mm_along
+    lean = weighted_median(tracks.slope[long], tracks.length[long].astype(float) ** 2)
+    if abs(lean) * mm_along < _LEANING * mm_across:
+        return tracks
+    # thin lines that lean leave short runs: set them upright, column by column, and look again
+    shear = np.rint(lean * cell * np.arange(reduced.shape[1])).astype(np.int64)
+    row = np.arange(reduced.shape[0])[:, None] + shear
+    inside = (row >= 0) & (row < reduced.shape[0])
+    leaning = np.take_along_axis(reduced, np.clip(row, 0, reduced.shape[0] - 1), axis=0)
+    leaning[~inside] = 255
+    return _find(leaning, shear, cell, page.shape[1], mm_along, mm_across, level, max_thickness)
+
+
+def _find(
+    reduced: NDArray[np.uint8],
+    shear: Ints,
+    cell: int,
+    width: int,
+    mm_along: float,
+    mm_across: float,
+    level: float,
+    max_thickness: float,
+) -> Tracks:
+    """Tracks of a page reduced to cells, whose columns were moved up by `shear` rows."""
     dark = RunSet.from_mask(reduced < level)
     opened = open_horizontal(dark, max(3, round(_PIECE_MM * mm_along / cell)))
     parts = label(opened)
@@ -156,12 +193,15 @@ def find_tracks(
     knot_y = row_sum[good] / knot_count
     knot_cell = np.flatnonzero(good) - base[knot_piece]
     knot_x = (knot_cell + 0.5) * cell - 0.5
-    darkness = 255.0 - reduced[np.rint(knot_y).astype(np.int64), knot_cell]
+    # over three rows, so that the row on which a thin line falls does not matter
+    row = np.rint(knot_y).astype(np.int64)[:, None] + np.arange(-1, 2)
+    row = np.clip(row, 0, reduced.shape[0] - 1)
+    darkness = (255.0 - reduced[row, knot_cell[:, None]]).sum(axis=1)
 
     # 2. pieces to tracks
     offset, slope = fit_lines(knot_x, knot_y, knot_piece, parts.n)
     alive = np.isfinite(offset)
-    start, stop = box[:, 0] * cell, np.minimum(box[:, 2] * cell, page.shape[1])
+    start, stop = box[:, 0] * cell, np.minimum(box[:, 2] * cell, width)
     length = (stop - start).astype(float)
     page_slope = weighted_median(slope[alive], length[alive] ** 2)
     lead = np.where(length > 15 * mm_along, slope, page_slope)
@@ -169,27 +209,39 @@ def find_tracks(
         start, stop, offset + slope * start, offset + slope * stop, lead, alive, mm_along, mm_across
     )
 
-    # 3. tracks anew from their knots
-    knot_track = track[knot_piece]
-    order = np.lexsort((knot_x, knot_track))
-    knot_track, knot_x, knot_y, knot_count, darkness = (
-        a[order] for a in (knot_track, knot_x, knot_y, knot_count, darkness)
-    )
-    step = np.abs(np.diff(darkness))
-    beside = (knot_track[1:] == knot_track[:-1]) & (np.diff(knot_x) < 1.5 * cell)
-    roughness = group_quantile(step[beside], knot_track[1:][beside], n)
-    usual_darkness = np.maximum(group_quantile(darkness, knot_track, n), 1.0)
-    roughness = np.nan_to_num(roughness / usual_darkness, nan=1.0)
-    offset, slope = fit_lines(knot_x, knot_y, knot_track, n)
+    # 3. tracks anew from their knots, back on the page
+    knot_y = knot_y + shear[knot_cell]
+    page_slope += _slope_of(shear, cell)
+    order = np.lexsort((knot_x, track[knot_piece]))
+    whose = track[knot_piece][order]
+    knot_x, knot_y, darkness = knot_x[order], knot_y[order], darkness[order]
+    offset, slope = fit_lines(knot_x, knot_y, whose, n)
+    beside = (whose[1:] == whose[:-1]) & (np.diff(knot_x) < 1.5 * cell)
+    step = group_quantile(np.abs(np.diff(darkness))[beside], whose[1:][beside], n)
+    usual_darkness = np.maximum(group_quantile(darkness, whose, n), 1.0)
     owner = track[alive]
-    first = np.full(n, page.shape[1])
-    last = np.zeros(n, np.int64)
+    first: Ints = np.full(n, width, np.int64)
+    last: Ints = np.zeros(n, np.int64)
     np.minimum.at(first, owner, start[alive])
     np.maximum.at(last, owner, stop[alive])
-    covered = np.minimum(np.bincount(owner, length[alive], n), last - first)
-    thickness = group_quantile(knot_count.astype(float), knot_track, n)
-    columns = (first, last, offset, slope, thickness, covered, roughness)
-    return Tracks(*columns, knot_track, knot_x, knot_y, page_slope)
+    return Tracks(
+        start=first,
+        stop=last,
+        offset=offset,
+        slope=slope,
+        thickness=group_quantile(knot_count[order].astype(float), whose, n),
+        covered=np.minimum(np.bincount(owner, length[alive], n), last - first),
+        roughness=np.nan_to_num(step / usual_darkness, nan=1.0),
+        knot_track=whose,
+        knot_x=knot_x,
+        knot_y=knot_y,
+        page_slope=page_slope,
+    )
+
+
+def _slope_of(shear: Ints, cell: int) -> float:
+    """Rows per column of the page by which the cells' columns were moved."""
+    return float(shear[-1]) / (cell * max(shear.size - 1, 1))
 
 
 def _reduce_along(page: NDArray[np.uint8], cell: int) -> NDArray[np.uint8]:
@@ -219,9 +271,8 @@ def _link(
 
     chosen = np.flatnonzero(alive)
     chosen = chosen[np.argsort(start[chosen], kind="stable")]
-    start, stop, row_start, row_stop, lead = (
-        a[chosen] for a in (start, stop, row_start, row_stop, lead)
-    )
+    start, stop, lead = start[chosen], stop[chosen], lead[chosen]
+    row_start, row_stop = row_start[chosen], row_stop[chosen]
     # each piece with those that begin near its end
     lo = np.searchsorted(start, stop - _OVERLAP_MM * mm_along, side="right")
     hi = np.searchsorted(start, stop + _GAP_MM * mm_along, side="left")
