@@ -32,6 +32,7 @@ Bools = NDArray[np.bool_]
 
 _MOST_OF_DOT = 4.0  # a solid lump of more dots' area is no dot
 _MOST_OF_MARK = 8.0  # dots; what is larger is writing of some kind
+_LONGEST_MARK = 2.0  # x-heights of the page; dashes are longer, but so are strokes of drawings
 _SMALLEST_LETTER = 0.8  # x-heights
 _DOUBTFUL = (0.3, 8.0)  # dots' areas: what is as large as a mark but stands where none does
 _SURPLUS = 3.0  # so much more of it in the lines than elsewhere is writing that is not understood
@@ -101,6 +102,7 @@ def find_specks(
         stout = side < 2 * np.minimum(shapes.width, shapes.height)
         blot = small & lump & stout & (area > _MOST_OF_DOT * dots.area)
         blot &= (places.bottom > 0.5) | (places.top < -0.2)  # on the baseline it may be a bold stop
+        small &= side < _LONGEST_MARK * measures.x_height_px
         asked = np.flatnonzero(small & ~blot & (area < _MOST_OF_MARK * dots.area))
         unfit = asked[~are_marks(places, asked, area, _is_round(components, shapes), dots)]
         lone = places.line < 0

@@ -388,9 +388,9 @@ def test_eight_thousand_glyphs_are_written_faster_than_json_writes_them_row_by_r
     def best(action):
         times = []
         for _ in range(5):
-            began = time.perf_counter()
+            began = time.process_time()
             action()
-            times.append(time.perf_counter() - began)
+            times.append(time.process_time() - began)
         return min(times)
 
     ours = best(layout.to_json)
