@@ -19,12 +19,15 @@ from scanclean.columns import Pieces, stacks
 from scanclean.glyphs import Parts
 from scanclean.labels import Components
 from scanclean.lineset import LineSet
+from scanclean.neighbours import chains
 from scanclean.words import number_words
 
 __all__ = ["Glyphs", "TextLines", "put_in_order"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+
+_MESHED = 0.5  # of the narrower one's width and of the lower one's height
 
 
 @dataclass(frozen=True, eq=False)
@@ -146,6 +149,17 @@ def _line_order(lines: LineSet) -> Ints:
     middle = (lines.left + lines.right) / 2
     base = lines.baselines.at(np.arange(n), middle)
     block = _blocks(lines, base)
+    block = _meshed(*_block_boxes(lines, base, block))[block]
+    left, top, right, bottom = _block_boxes(lines, base, block)
+    rank = np.empty(left.size, np.int64)
+    rank[_block_order(left, top, right, bottom)] = np.arange(left.size)
+    return np.lexsort((lines.left, base, rank[block]))
+
+
+def _block_boxes(
+    lines: LineSet, base: Floats, block: Ints
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """(B,) left, top, right and bottom of each block."""
     b = int(block.max()) + 1
     left, top = np.full((2, b), np.inf)
     right, bottom = np.full((2, b), -np.inf)
@@ -153,9 +167,21 @@ def _line_order(lines: LineSet) -> Ints:
     np.maximum.at(right, block, lines.right)
     np.minimum.at(top, block, base - lines.x_height)
     np.maximum.at(bottom, block, base)
-    rank = np.empty(b, np.int64)
-    rank[_block_order(left, top, right, bottom)] = np.arange(b)
-    return np.lexsort((lines.left, base, rank[block]))
+    return left, top, right, bottom
+
+
+def _meshed(left: Floats, top: Floats, right: Floats, bottom: Floats) -> Ints:
+    """(B,) one number for blocks that stand in each other's rows and columns.
+
+    Captions in small type between the rows of a form stack up among themselves, but are read row
+    by row with what they are captions of.
+    """
+    shared = np.minimum(right[:, None], right) - np.maximum(left[:, None], left)
+    narrow = np.minimum((right - left)[:, None], right - left)
+    level = np.minimum(bottom[:, None], bottom) - np.maximum(top[:, None], top)
+    low = np.minimum((bottom - top)[:, None], bottom - top)
+    i, j = np.nonzero((shared > _MESHED * narrow) & (level > _MESHED * low))
+    return chains(i, j, left.size)[1]
 
 
 def _blocks(lines: LineSet, base: Floats) -> Ints:

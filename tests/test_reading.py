@@ -2,10 +2,15 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from PIL import Image, ImageDraw, ImageFont
 
 from fixtures.drawn import draw
 from fixtures.sheet import new_sheet
+from scanclean.clean import clean_page
+from scanclean.pageio import Scan
+from scanclean.recipe import Recipe
 from scanclean.score import match_boxes
+from scanclean.units import Resolution
 from scanclean.words import number_words
 from tests.figures import hulls
 from tests.reading import finished, read, set_text
@@ -153,3 +158,16 @@ def test_baselines_end_at_the_sides_of_the_line_box():
     assert (lines.baseline[:, 1, 0] == lines.box[:, 2]).all()
     slope = np.diff(lines.baseline[:, :, 1]) / np.diff(lines.baseline[:, :, 0])
     assert np.degrees(np.arctan(slope)) == pytest.approx(2.0, abs=0.3)
+
+
+def test_small_captions_between_large_rows_are_read_row_by_row():
+    image = Image.new("L", (1500, 900), 255)
+    pen = ImageDraw.Draw(image)
+    small, large = ImageFont.load_default(26), ImageFont.load_default(64)
+    for row in range(5):
+        pen.text((60, 40 + 165 * row), "Name of the vessel", font=small, fill=0)
+        pen.text((70, 85 + 165 * row), "PATIENT HERON and five men", font=large, fill=0)
+    scan = Scan(np.asarray(image), Resolution(300, 300), 1, 1, "form.png")
+    lines = clean_page(scan, Recipe()).lines
+    assert len(lines.box) == 10
+    assert (np.diff(lines.box[:, 3]) > 0).all()
