@@ -123,7 +123,7 @@ def strokes_within(
         _close_bowls(view, slope, longest, stroke)
         _lie_along(view, out[d], stroke)
     inside = strip[reach - half : reach + half + 1]
-    return inside, kept & inside
+    return inside, _without_slits(kept) & inside
 
 
 def _sampled(page: Bools, row: Ints, column: Ints) -> Bools:
@@ -134,7 +134,7 @@ def _sampled(page: Bools, row: Ints, column: Ints) -> Bools:
     return np.asarray(ink & on_page)
 
 
-def _moved(a: NDArray[np.generic], by: int) -> NDArray[np.generic]:
+def _moved(a: Bools, by: int) -> Bools:
     """a[..., x + by], nothing where that is outside."""
     moved = np.zeros_like(a)
     n = a.shape[-1]
@@ -224,6 +224,13 @@ def _lie_along(view: Bools, out: Bools, stroke: int) -> None:
     inside = (np.cumsum(lying[:-1]) > 0) & (sticks_out <= stroke)
     depth = np.where(inside, stroke - sticks_out + 1, 0)
     view |= np.arange(view.shape[0])[:, None] < depth
+
+
+def _without_slits(kept: Bools) -> Bools:
+    """Gaps of one or two pixels between strokes filled: between their slanting edges is no paper."""
+    left, right = _moved(kept, -1), _moved(kept, 1)
+    left_two, right_two = left | _moved(kept, -2), right | _moved(kept, 2)
+    return kept | (left & right_two) | (left_two & right)
 
 
 def _stretches(mask: Bools) -> tuple[Ints, Ints]:

@@ -187,7 +187,7 @@ def _made_alike(lines: Segments, rules: Segments) -> Bools:
     """(n,) bool: lines as thick and as dark as some rule."""
     same = np.abs(rules.half - lines.half[:, None]) <= 0.05 + 0.25 * rules.half
     same &= np.abs(rules.peak - lines.peak[:, None]) <= 0.35 * rules.peak
-    return np.any(same, axis=1)
+    return np.asarray(np.any(same, axis=1))
 
 
 def _side_like(lines: Segments, row: Bools) -> Bools:
@@ -196,7 +196,8 @@ def _side_like(lines: Segments, row: Bools) -> Bools:
     A stroke may hide a side; then others in its row speak for it.
     """
     clear = (lines.isolated >= _CLEAR) | (lines.length >= _STEM_MM)
-    return clear | ((row & clear).sum(axis=1) >= np.maximum(2, row.sum(axis=1) / 2))
+    spoken_for = (row & clear).sum(axis=1) >= np.maximum(2, row.sum(axis=1) / 2)
+    return np.asarray(clear | spoken_for)
 
 
 def _lean(rules: Segments, others: Segments) -> float:

@@ -32,14 +32,17 @@ Ints = NDArray[np.int64]
 Bytes = NDArray[np.uint8]
 
 # which lines are looked at, in millimetres
+_SURE_MM = 30.0  # of line alone, without a gap
 _SHORT_MM = 3.0  # the shortest
 _DOUBTFUL_MM = 25.0  # up to here what is no rule by itself may still be a side or a tick
 _LONG_MM = 60.0  # from here a rule need not run as the page's others do, nor be as thin
 _REACH_MM, _SHORT_REACH_MM = 13.0, 3.0  # how far ends may run on
 _FAINTEST = 0.92  # of the paper: what is darker may be a rule, faded ones included
-_STEADY, _STEADY_SHORT = 0.22, 0.35  # roughness; letters in a row have 0.27 and more
+_STEADY, _STEADY_SHORT = 0.15, 0.25  # roughness; letters in a row have 0.22 and more
 _DASH_PITCH_MM = 3.0
 _SKEW_MARGIN = 0.5  # degrees: rules are not all parallel
+_MOST_NOISE = 0.06
+_UPRIGHT, _PARALLEL, _COMPANY = 2.0, 0.02, 3  # degrees; slope; lines, itself counted
 _MOST_SHORT = 1500  # lines
 _BATCH = 1 << 21  # samples measured at a time
 
@@ -148,7 +151,8 @@ def find_rules(
     nothing = RunSet.empty(ink.shape)
     if not settings.enabled or not ink:
         return Ruling((), nothing, nothing)
-    noise = None if tone is None else tone.noise
+    # where a pattern leaves no blank paper the measured noise is the pattern's
+    noise = None if tone is None else min(tone.noise, _MOST_NOISE)
     pages = _covers(ink, resolution) if tone is None else (tone.ratio, tone.ratio.T)
     sides = tuple(
         _Side(page, vertical, noise, resolution, settings)
@@ -213,8 +217,9 @@ def _records(part: RuledLines, by_shape: Bools, ink: RunSet) -> Iterator[Rule]:
     for i in np.flatnonzero(part.is_rule):
         place = lines.begin[i] + np.flatnonzero(part.live[lines.begin[i] : lines.begin[i + 1]])
         column, centre = lines.column[place], lines.centre[place]
-        x, y = column, np.rint(centre).astype(np.int64)
-        if _covered(ink, *((y, x) if part.vertical else (x, y))) < _LEAST_INK:
+        alone = place[lines.sure[place]]
+        x, y = lines.column[alone], np.rint(lines.centre[alone]).astype(np.int64)
+        if alone.size and _covered(ink, *((y, x) if part.vertical else (x, y))) < _LEAST_INK:
             continue
         left, right = int(column[0]), int(column[-1]) + 1
         top = max(0, int(np.floor(centre.min() + low[i] + 0.5)))
@@ -347,7 +352,10 @@ class _Side:
         is_rule &= lines.peak >= 0.03
         is_rule &= lines.thickness <= 1.15 * self.max_thickness
         is_rule &= bend / self.mm_across <= np.minimum(0.16, 0.02 + 0.0012 * length)
-        is_rule &= lines.agreement(0.12 * self.mm_across) >= 0.85
+        # arcs and letters that touch by chance have their pieces beside the line through them
+        agreement = lines.agreement(0.12 * self.mm_across)
+        sure = (isolated * length >= _SURE_MM) & (absent <= 0.05) & (bend / self.mm_across < 0.05)
+        is_rule &= agreement >= np.where(sure, 0.4, 0.85)
         return is_rule & ((length > _LONG_MM) | (np.abs(slope - tracks.page_slope) < 0.02))
 
     def may_belong(self, lines: Lines) -> Bools:
@@ -369,6 +377,7 @@ class _Side:
 
 def _accept_long(sides: tuple[_Side, ...]) -> None:
     """Find the lines that are rules by themselves."""
+    batches = []
     for side in sides:
         length = side.segments.length
         fits = (length >= side.min_length) & (side.tracks.roughness < _STEADY)
@@ -379,7 +388,27 @@ def _accept_long(sides: tuple[_Side, ...]) -> None:
         for (chosen, lines), (_, is_rule) in zip(measured, side.found, strict=True):
             alone = (length[chosen] > _LONG_MM) | (lines.isolated > 0.6)
             is_rule &= alone | _is_usual(lines, usual)
-            side.accepted[chosen] = is_rule
+        batches.append([chosen for chosen, _ in measured])
+    _drop_lone_leaners(sides)
+    for side, chosen in zip(sides, batches, strict=True):
+        for some, (_, is_rule) in zip(chosen, side.found, strict=True):
+            side.accepted[some] = is_rule
+
+
+def _drop_lone_leaners(sides: tuple[_Side, ...]) -> None:
+    """Of lines that lean, keep those that others are parallel to: a page is turned as a whole."""
+    every = [part for side in sides for part in side.found]
+    leans = [
+        (-1 if side.vertical else 1) * lines.straight[1] * side.mm / side.mm_across
+        for side in sides
+        for lines, _ in side.found
+    ]
+    if not every:
+        return
+    known = np.concatenate([lean[is_rule] for lean, (_, is_rule) in zip(leans, every, strict=True)])
+    for lean, (_, is_rule) in zip(leans, every, strict=True):
+        company = (np.abs(lean[:, None] - known) < _PARALLEL).sum(axis=1)
+        is_rule &= (np.abs(lean) <= np.tan(np.radians(_UPRIGHT))) | (company >= _COMPANY)
 
 
 def _accept_short(sides: tuple[_Side, ...]) -> None:

@@ -143,13 +143,11 @@ def whittaker(y: Floats, weight: Floats, first: Ints, stiffness: float) -> Float
     from scipy.linalg import solveh_banded
 
     m = y.size
-    if m < 3:
-        total = weight.sum()
-        return np.full(m, (weight @ y) / total if total > 0 else 0.0)
     # one second difference for each three neighbours of one signal
-    bend = np.full(m - 2, float(stiffness))
+    bend = np.full(max(m - 2, 0), float(stiffness))
     inner = first[first > 0]
-    bend[np.concatenate((inner - 1, inner - 2))[np.concatenate((inner - 1, inner - 2)) < m - 2]] = 0
+    across = np.concatenate((inner - 1, inner - 2))  # those that reach into the next signal
+    bend[across[(across >= 0) & (across < m - 2)]] = 0
     band = np.zeros((3, m))
     band[2] = weight + 1e-6  # signals without weight stay at 0
     band[2, :-2] += bend
