@@ -121,8 +121,8 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     resolution = scan.dpi or _likely_resolution(scan.shape)
     pixels = scan.pixels if scan.pixels.dtype == np.bool_ else scan.grey()
     start = _find_ink(pixels, resolution, recipe)
-    skew, to_source = find_skew(start.ink - start.shade, resolution), np.eye(3)
-    leaning = skew
+    skew = leaning = find_skew(start.ink - start.shade, resolution)
+    to_source: NDArray[np.float64] = np.eye(3)
     if straighten and abs(skew) >= _LEAST_TURN:
         pixels, to_source = turn(pixels, skew, resolution)
         start, leaning = _find_ink(pixels, resolution, recipe), 0.0
