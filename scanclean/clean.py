@@ -122,9 +122,10 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     pixels = scan.pixels if scan.pixels.dtype == np.bool_ else scan.grey()
     start = _find_ink(pixels, resolution, recipe)
     skew = leaning = find_skew(start.ink - start.shade, resolution)
-    to_source: NDArray[np.float64] = np.eye(3)
+    to_source = np.eye(3)
     if straighten and abs(skew) >= _LEAST_TURN:
-        pixels, to_source = turn(pixels, skew, resolution)
+        pixels, matrix = turn(pixels, skew, resolution)
+        to_source = matrix.astype(np.float64)
         start, leaning = _find_ink(pixels, resolution, recipe), 0.0
     if scan.dpi is None:
         resolution = _estimated(start.ink - start.shade, resolution)
