@@ -227,7 +227,7 @@ def _lie_along(view: Bools, out: Bools, stroke: int) -> None:
 
 
 def _without_slits(kept: Bools) -> Bools:
-    """Gaps of one or two pixels between strokes filled: between their slanting edges is no paper."""
+    """Gaps of one or two pixels filled: between the slanting edges of strokes is no paper."""
     left, right = _moved(kept, -1), _moved(kept, 1)
     left_two, right_two = left | _moved(kept, -2), right | _moved(kept, 2)
     return kept | (left & right_two) | (left_two & right)

@@ -146,7 +146,8 @@ class Lines:
         """(T,) float: share of the track's knots that lie on the centre found."""
         whose, first = self.tracks.knot_track, self.begin[:-1]
         along = np.rint(self.tracks.knot_x).astype(np.int64) - self.column[first][whose]
-        near = np.abs(self.tracks.knot_y - self.centre[first[whose] + along]) < tolerance
+        place = np.minimum(first[whose] + along, self.begin[1:][whose] - 1)
+        near = np.abs(self.tracks.knot_y - self.centre[place]) < tolerance
         total = np.maximum(np.bincount(whose, minlength=len(self)), 1)
         return np.asarray(np.bincount(whose[near], minlength=len(self)) / total)
 

@@ -390,8 +390,8 @@ def _accept_long(sides: tuple[_Side, ...]) -> None:
             is_rule &= alone | _is_usual(lines, usual)
         batches.append([chosen for chosen, _ in measured])
     _drop_lone_leaners(sides)
-    for side, chosen in zip(sides, batches, strict=True):
-        for some, (_, is_rule) in zip(chosen, side.found, strict=True):
+    for side, parts in zip(sides, batches, strict=True):
+        for some, (_, is_rule) in zip(parts, side.found, strict=True):
             side.accepted[some] = is_rule
 
 

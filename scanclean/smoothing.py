@@ -78,11 +78,11 @@ def running_quantile(
 
 
 def fit_lines(
-    x: Floats, y: Floats, group: Ints, n: int, *, rounds: int = 3, floor: float = 0.3
+    x: Floats, y: Floats, group: Ints, n: int, *, rounds: int = 4, floor: float = 0.3
 ) -> tuple[Floats, Floats]:
     """A robust straight line through each group of points: y = offset + slope * x.
 
-    Least squares, re-weighted by Cauchy weights with 1.5 median deviations as their scale.
+    Least squares, re-weighted by Cauchy weights with 1.5 mean deviations as their scale.
 
     Parameters
     ----------
@@ -112,7 +112,7 @@ def fit_lines(
             offset = mean_y - slope * mean_x
             if left > 1:
                 off = np.abs(y - offset[group] - slope[group] * x)
-                scale = np.maximum(1.5 * group_quantile(off, group, n), floor)
+                scale = np.maximum(1.5 * np.bincount(group, weight * off, n) / total, floor)
                 weight = 1 / (1 + (off / scale[group]) ** 2)
     return offset, slope
 

@@ -178,6 +178,8 @@ def _guess(tracks: Tracks, first: Ints, track: Ints, left: Ints, width: int) -> 
     """(B,) float: row of the centre from the straight line and what the knots say beyond it."""
     whose = tracks.knot_track
     at = first[whose] + ((tracks.knot_x - left[first][whose]) // width).astype(np.int64)
+    # the middle of the page's last cell may lie beyond the page
+    at = np.minimum(at, np.append(first[1:], track.size)[whose] - 1)
     count = np.bincount(at, minlength=track.size)
     residue = tracks.knot_y - tracks.offset[whose] - tracks.slope[whose] * tracks.knot_x
     residue = np.bincount(at, residue, track.size) / np.maximum(count, 1)

@@ -27,7 +27,7 @@ _GAP_MM = 6.0
 _GAP_SHARE = 0.45  # of the shorter of two pieces
 _OVERLAP_MM = 3.0
 _LONG_MM = 12.0  # from here a track shows the direction of the page's rules
-_LEANING = 0.015  # slope at which a second look is worth its time
+_LEANING = 0.03  # slope at which a second look is worth its time
 _STEADIER = 0.3
 _LINK_MM, _LINK_PX, _LINK_DRIFT = 0.135, 1.2, 0.012
 
