@@ -9,30 +9,30 @@ from functools import partial
 import numpy as np
 from numpy.typing import NDArray
 
-from scanclean.density import Tone, measure_tone
-from scanclean.edges import find_edges
-from scanclean.glyphs import join_parts
-from scanclean.holes import find_pinholes
-from scanclean.labels import Components, label
+from scanclean.ink.density import Tone, measure_tone
+from scanclean.ink.edges import find_edges
+from scanclean.ink.holes import find_pinholes
+from scanclean.ink.skew import find_skew
+from scanclean.ink.skew import straighten as turn
+from scanclean.ink.threshold import threshold
 from scanclean.ledger import Ledger
-from scanclean.pageio import Scan
-from scanclean.reading import Glyphs, TextLines, put_in_order
 from scanclean.recipe import Recipe
-from scanclean.ruling import Rule, find_rules
-from scanclean.runs import RunSet, complement, crop
-from scanclean.skew import find_skew
-from scanclean.skew import straighten as turn
-from scanclean.specks import find_specks
+from scanclean.rules.ruling import Rule, find_rules
+from scanclean.scans.pageio import Scan
+from scanclean.sets.labels import Components, label
+from scanclean.sets.runs import RunSet, complement, crop
 from scanclean.steps import Step
-from scanclean.textlines import LineSet, find_lines
-from scanclean.textmeasure import (
+from scanclean.text.glyphs import join_parts
+from scanclean.text.reading import Glyphs, TextLines, put_in_order
+from scanclean.text.specks import find_specks
+from scanclean.text.textlines import LineSet, find_lines
+from scanclean.text.textmeasure import (
     Spread,
     TextMeasures,
     estimate_dpi,
     measure_spread,
     measure_text,
 )
-from scanclean.threshold import threshold
 from scanclean.units import MM_PER_INCH, Resolution
 
 __all__ = ["CleanPage", "clean_page"]

@@ -24,9 +24,9 @@ from scanclean import __version__
 from scanclean.errors import CallError, RecipeError, ScancleanError
 
 if TYPE_CHECKING:
-    from scanclean.batch import Batch, Outcome
+    from scanclean.batches.batch import Batch, Outcome
+    from scanclean.batches.sources import PageSelection
     from scanclean.recipe import Recipe
-    from scanclean.sources import PageSelection
     from scanclean.units import Resolution
 
 __all__ = ["cli", "main"]
@@ -63,7 +63,7 @@ def _pages(ctx: click.Context, param: click.Parameter, value: str | None) -> Pag
     """``1-3,7``."""
     if value is None:
         return None
-    from scanclean.sources import PageSelection
+    from scanclean.batches.sources import PageSelection
 
     try:
         return PageSelection.parse(value)
@@ -206,8 +206,8 @@ def clean(
       scanclean clean folio7.png -o out --recipe ledger.toml --glyphs
       find . -name '*.tif' | scanclean clean - -o out --dpi 300
     """
-    from scanclean.batch import plan_batch
-    from scanclean.work import CleanWork
+    from scanclean.batches.batch import plan_batch
+    from scanclean.batches.work import CleanWork
 
     work = CleanWork(_recipe(recipe_file), dpi, straighten, glyphs)
     arguments = _arguments(scans)
@@ -230,8 +230,8 @@ def restore(ledgers: tuple[str, ...], output: str, jobs: int, replace: bool, qui
       scanclean restore out/folio7.ledger.png -o back
       scanclean restore out -o back
     """
-    from scanclean.batch import plan_batch
-    from scanclean.work import LEDGER_SUFFIXES, RestoreWork
+    from scanclean.batches.batch import plan_batch
+    from scanclean.batches.work import LEDGER_SUFFIXES, RestoreWork
 
     arguments = _arguments(ledgers)
     batch = plan_batch(
@@ -268,8 +268,8 @@ def _recipe(path: str | None) -> Recipe:
 
 def _arguments(arguments: tuple[str, ...]) -> list[str]:
     """Paths as given and those listed on standard input for ``-``; one not there is refused."""
-    from scanclean.files import shown
-    from scanclean.sources import read_listing
+    from scanclean.batches.sources import read_listing
+    from scanclean.scans.files import shown
 
     if arguments.count("-") > 1:
         raise CallError("- can stand for standard input only once")
@@ -324,8 +324,8 @@ def _tell(outcome: Outcome, quiet: bool) -> None:
 
 
 def _summary(batch: Batch, counts: dict[str, int], seconds: float) -> str:
-    from scanclean.files import shown
-    from scanclean.runlog import RUN_LOG
+    from scanclean.batches.runlog import RUN_LOG
+    from scanclean.scans.files import shown
 
     parts = [f"{counts['done']} done"]
     if counts["skipped"]:

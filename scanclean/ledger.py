@@ -15,7 +15,7 @@ from types import MappingProxyType
 import numpy as np
 from numpy.typing import NDArray
 
-from scanclean.runs import RunSet, union
+from scanclean.sets.runs import RunSet, union
 
 __all__ = ["CLAIMS", "CLASSES", "PALETTE", "Ledger"]
 

@@ -22,13 +22,13 @@ from functools import cache, cached_property
 from pathlib import Path
 from typing import Any
 
-from scanclean.edges import EdgeSettings
 from scanclean.errors import RecipeError
-from scanclean.holes import HoleSettings
-from scanclean.ruling import RuleSettings
-from scanclean.specks import SpeckSettings
+from scanclean.ink.edges import EdgeSettings
+from scanclean.ink.holes import HoleSettings
+from scanclean.ink.threshold import ThresholdSettings
+from scanclean.rules.ruling import RuleSettings
 from scanclean.steps import Step
-from scanclean.threshold import ThresholdSettings
+from scanclean.text.specks import SpeckSettings
 from scanclean.units import Length
 
 __all__ = ["Recipe", "parse_recipe", "read_recipe", "to_toml"]

@@ -11,11 +11,11 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from scanclean import elements
-from scanclean.elements import Element
 from scanclean.ledger import CLAIMS
-from scanclean.morphology import close_set, dilate, erode, hit_or_miss, open_set, reconstruct
-from scanclean.runs import RunSet
+from scanclean.sets import elements
+from scanclean.sets.elements import Element
+from scanclean.sets.morphology import close_set, dilate, erode, hit_or_miss, open_set, reconstruct
+from scanclean.sets.runs import RunSet
 from scanclean.settings import setting
 from scanclean.units import Length, Resolution
 

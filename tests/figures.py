@@ -23,8 +23,8 @@ from scipy import ndimage
 from fixtures.drawn import VARIANTS, DrawnPage, available, draw_variant
 from scanclean.clean import CleanPage, clean_page
 from scanclean.ledger import PALETTE
-from scanclean.pageio import Scan
 from scanclean.recipe import Recipe
+from scanclean.scans.pageio import Scan
 from scanclean.score import CleaningLosses, cleaning_losses, match_boxes, match_regions
 
 __all__ = ["Figures", "Outcome", "clean_drawn", "difference", "measure", "outcome_of", "table"]

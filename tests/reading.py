@@ -10,14 +10,14 @@ from numpy.typing import NDArray
 from fixtures.drawn import DrawnPage, Scanner
 from fixtures.scanner import scan_sheet
 from fixtures.sheet import Sheet, new_sheet
-from scanclean.glyphs import join_parts
-from scanclean.labels import Components, label
-from scanclean.lineset import LineSet
-from scanclean.reading import Glyphs, TextLines, put_in_order
-from scanclean.runs import RunSet
-from scanclean.specks import SpeckSettings, find_specks
-from scanclean.textlines import find_lines
-from scanclean.textmeasure import TextMeasures, measure_text
+from scanclean.sets.labels import Components, label
+from scanclean.sets.runs import RunSet
+from scanclean.text.glyphs import join_parts
+from scanclean.text.lineset import LineSet
+from scanclean.text.reading import Glyphs, TextLines, put_in_order
+from scanclean.text.specks import SpeckSettings, find_specks
+from scanclean.text.textlines import find_lines
+from scanclean.text.textmeasure import TextMeasures, measure_text
 from scanclean.units import Resolution
 
 Mask = NDArray[np.bool_]

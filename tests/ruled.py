@@ -11,9 +11,9 @@ from dataclasses import dataclass, field
 import numpy as np
 from scipy import ndimage
 
-from scanclean.density import measure_tone
-from scanclean.ruling import RuleSettings, find_rules
-from scanclean.runs import RunSet
+from scanclean.ink.density import measure_tone
+from scanclean.rules.ruling import RuleSettings, find_rules
+from scanclean.sets.runs import RunSet
 from scanclean.units import Resolution
 
 INK_RATIO = 0.68  # of the paper: a plain threshold, so that the tests depend on ruling alone

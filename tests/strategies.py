@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from numpy.typing import NDArray
 
-from scanclean.elements import Element
+from scanclean.sets.elements import Element
 
 Mask = NDArray[np.bool_]
 

@@ -13,12 +13,12 @@ import numpy as np
 import pytest
 from PIL import Image
 
-import scanclean.batch
-from scanclean.batch import Batch, Outcome, plan_batch
+import scanclean.batches.batch
+from scanclean.batches.batch import Batch, Outcome, plan_batch
+from scanclean.batches.runlog import RUN_LOG, RunLog
+from scanclean.batches.sources import PageSelection
 from scanclean.errors import CallError, OutputError
-from scanclean.pageio import read_page
-from scanclean.runlog import RUN_LOG, RunLog
-from scanclean.sources import PageSelection
+from scanclean.scans.pageio import read_page
 from tests.works import Copy
 
 PART = ".scanclean-part"
@@ -308,7 +308,7 @@ def test_a_second_run_does_what_changed(here, monkeypatch):
     assert statuses(run(work=Copy(level=100))) == dict.fromkeys(NAMES, "done")
     assert statuses(run(work=Copy(level=100))) == dict.fromkeys(NAMES, "skipped")
     assert statuses(run(work=Copy(level=100), redo=True)) == dict.fromkeys(NAMES, "done")
-    monkeypatch.setattr(scanclean.batch, "__version__", "0.0.0")
+    monkeypatch.setattr(scanclean.batches.batch, "__version__", "0.0.0")
     assert statuses(run(work=Copy(level=100))) == dict.fromkeys(NAMES, "done")
 
 

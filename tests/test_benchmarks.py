@@ -13,8 +13,8 @@ from PIL import Image
 
 from fixtures.drawn import draw
 from scanclean.clean import clean_page
-from scanclean.pageio import read_page
 from scanclean.recipe import Recipe
+from scanclean.scans.pageio import read_page
 from tests.benchmarks import bench_clean, bench_threshold, plain_scripts
 
 ROOT = Path(__file__).parent.parent

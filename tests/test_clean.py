@@ -19,16 +19,16 @@ from fixtures.before_after import before_after
 from fixtures.drawn import DrawnPage, RuleStyle, Scanner, draw
 from fixtures.make import SCANS as DRAWN
 from scanclean.clean import CleanPage, clean_page
-from scanclean.density import measure_tone
-from scanclean.edges import EdgeSettings
-from scanclean.holes import HoleSettings
+from scanclean.ink.density import measure_tone
+from scanclean.ink.edges import EdgeSettings
+from scanclean.ink.holes import HoleSettings
+from scanclean.ink.threshold import ThresholdSettings, threshold
 from scanclean.ledger import CLAIMS, CLASSES, Ledger
-from scanclean.pageio import Scan, count_pages, read_page
 from scanclean.recipe import Recipe
-from scanclean.ruling import RuleSettings
-from scanclean.specks import SpeckSettings
+from scanclean.rules.ruling import RuleSettings
+from scanclean.scans.pageio import Scan, count_pages, read_page
 from scanclean.steps import PLACES, Step
-from scanclean.threshold import ThresholdSettings, threshold
+from scanclean.text.specks import SpeckSettings
 from scanclean.units import Length, Resolution
 
 FIXTURES = Path(__file__).parent.parent / "fixtures"

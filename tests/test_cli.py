@@ -637,9 +637,9 @@ def test_a_record_that_is_no_file_is_one_line(box12):
 
 def test_a_program_error_is_one_line_that_says_where(box12):
     trouble = (
-        "import scanclean.work\n"
+        "import scanclean.batches.work\n"
         "def broken(*a, **k):\n    raise KeyError('first\\nsecond')\n"
-        "scanclean.work.clean_page = broken\n"
+        "scanclean.batches.work.clean_page = broken\n"
     )
     done = scanclean("clean", "box12/folio1.png", "-o", "out", code=trouble + MAIN)
     assert done.returncode == 1
@@ -745,12 +745,12 @@ def test_a_ledger_that_is_none_is_told(box12):
 
 
 SLOW = """
-import time, scanclean.work
-real = scanclean.work.clean_page
+import time, scanclean.batches.work
+real = scanclean.batches.work.clean_page
 def slow(*a, **k):
     time.sleep(0.2)
     return real(*a, **k)
-scanclean.work.clean_page = slow
+scanclean.batches.work.clean_page = slow
 """
 
 

@@ -2,11 +2,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from scanclean.company import are_in_rows, fill_counters
-from scanclean.labels import label
-from scanclean.runs import RunSet
-from scanclean.textmeasure import measure_spread
-from scanclean.upright import Frame, place
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
+from scanclean.text.company import are_in_rows, fill_counters
+from scanclean.text.textmeasure import measure_spread
+from scanclean.text.upright import Frame, place
 
 
 def shapes_of(boxes, shape=(60, 200), hollow=()):

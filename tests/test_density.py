@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 from skimage import filters
 
-from scanclean.blocks import Surface, block_moments, sliding_max, sliding_min
-from scanclean.density import DENSITY, measure_tone, otsu_level, run_length
+from scanclean.ink.blocks import Surface, block_moments, sliding_max, sliding_min
+from scanclean.ink.density import DENSITY, measure_tone, otsu_level, run_length
 from tests.greys import bars
 
 

@@ -3,8 +3,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from scanclean.edges import EdgeSettings, find_edges
-from scanclean.runs import RunSet
+from scanclean.ink.edges import EdgeSettings, find_edges
+from scanclean.sets.runs import RunSet
 from scanclean.units import Length, Resolution
 
 DPI = Resolution(200, 200)

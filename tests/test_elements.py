@@ -5,8 +5,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from scanclean.elements import box, diamond, disk, from_text, line
-from scanclean.runs import RunSet
+from scanclean.sets.elements import box, diamond, disk, from_text, line
+from scanclean.sets.runs import RunSet
 from tests.strategies import elements
 
 

@@ -9,9 +9,9 @@ from pathlib import Path
 
 import pytest
 
-from scanclean import files, pageio
 from scanclean.errors import OutputError, PageError
 from scanclean.ledger import PALETTE
+from scanclean.scans import files, pageio
 from tests.pagefiles import (
     DPI_300,
     assert_one_clear_line,
@@ -80,7 +80,8 @@ def test_a_full_disk(tmp_path, monkeypatch):
 def test_a_real_limit_of_the_system_leaves_nothing(tmp_path):
     code = (
         "import resource, sys, numpy as np\n"
-        "from scanclean import errors, pageio, units\n"
+        "from scanclean import errors, units\n"
+        "from scanclean.scans import pageio\n"
         "resource.setrlimit(resource.RLIMIT_FSIZE, (300, 300))\n"
         "noise = np.random.default_rng(0).random((200, 200)) < 0.5\n"
         "try:\n"

@@ -5,13 +5,13 @@ import pytest
 from sklearn.datasets import load_digits
 
 from fixtures.drawn import draw
-from scanclean.glyphs import join_parts
-from scanclean.labels import label
-from scanclean.runs import RunSet
 from scanclean.score import match_boxes
-from scanclean.slant import line_slants
-from scanclean.textmeasure import measure_spread
-from scanclean.upright import place
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
+from scanclean.text.glyphs import join_parts
+from scanclean.text.slant import line_slants
+from scanclean.text.textmeasure import measure_spread
+from scanclean.text.upright import place
 from tests.reading import read, set_text
 
 
@@ -22,7 +22,7 @@ def true_boxes(page) -> np.ndarray:
     pieces, count = ndimage.label(page.glyph_map > 0, np.ones((3, 3), bool))
     glyphs = page.glyphs.box.shape[0]
     pairs = np.unique(np.stack((page.glyph_map[page.ink] - 1, pieces[page.ink] - 1)), axis=1)
-    from scanclean.neighbours import chains
+    from scanclean.text.neighbours import chains
 
     n, group = chains(pairs[0], glyphs + pairs[1], glyphs + count)
     box = np.empty((n, 4), np.int64)

@@ -7,15 +7,15 @@ import pytest
 from scipy import ndimage
 
 from fixtures.drawn import Ink, Scanner, draw
-from scanclean.contrast import INK, Contrast, close_paper, measure_contrast
-from scanclean.density import measure_tone
-from scanclean.outlines import find_outlines
-from scanclean.relaxation import outline_level, relaxed_ink
-from scanclean.runs import RunSet
+from scanclean.ink.contrast import INK, Contrast, close_paper, measure_contrast
+from scanclean.ink.density import measure_tone
+from scanclean.ink.outlines import find_outlines
+from scanclean.ink.relaxation import outline_level, relaxed_ink
+from scanclean.ink.shade import find_shade
+from scanclean.ink.solids import fill_solids
+from scanclean.ink.threshold import ThresholdSettings, is_clean, threshold
 from scanclean.score import contest_measures
-from scanclean.shade import find_shade
-from scanclean.solids import fill_solids
-from scanclean.threshold import ThresholdSettings, is_clean, threshold
+from scanclean.sets.runs import RunSet
 from scanclean.units import Resolution
 from tests.greys import bars
 
@@ -128,7 +128,7 @@ def test_the_level_of_outlines_is_half_of_the_strokes_near_by():
 
 
 def test_ink_is_exact_where_outlines_are_split_in_half(monkeypatch):
-    monkeypatch.setattr("scanclean.relaxation._FULL_OUTLINE", (20.0, 30.0))
+    monkeypatch.setattr("scanclean.ink.relaxation._FULL_OUTLINE", (20.0, 30.0))
     truth = bars(400, 400) == 40
     page = blurred(bars(400, 400, paper=210, ink=70), 1.0, noise=6)
     _, _, ink = hard(page)
@@ -148,8 +148,8 @@ def test_ink_takes_its_outline_in_and_no_more():
 def test_ink_does_not_depend_on_how_the_page_is_cut_into_tiles(monkeypatch):
     page = blurred(bars(300, 500, paper=210, ink=90), 1.0, noise=8)
     _, _, ink = hard(page)
-    monkeypatch.setattr("scanclean.relaxation._TILE", (17, 40))
-    monkeypatch.setattr("scanclean.outlines._STRIP", 500 * 9)
+    monkeypatch.setattr("scanclean.ink.relaxation._TILE", (17, 40))
+    monkeypatch.setattr("scanclean.ink.outlines._STRIP", 500 * 9)
     _, _, in_small_tiles = hard(page)
     assert (ink == in_small_tiles).all()
 

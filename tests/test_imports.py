@@ -13,6 +13,7 @@ import scanclean
 
 PACKAGE = Path(scanclean.__file__).parent
 FACADE = {"__init__", "__main__"}
+FLOORS = sorted(path.parent.name for path in PACKAGE.glob("*/__init__.py"))
 
 ORDER = """
 errors units settings
@@ -35,33 +36,32 @@ def imported(path: Path) -> dict[str, int]:
     for node in ast.walk(ast.parse(path.read_text("utf-8"))):
         if isinstance(node, ast.ImportFrom) and node.level == 0:
             module = node.module or ""
-            if module == "scanclean":
+            if module in ("scanclean", *(f"scanclean.{floor}" for floor in FLOORS)):
                 found.update((a.name, node.lineno) for a in node.names if a.name != "__version__")
             elif module.startswith("scanclean."):
-                found[module.split(".")[1]] = node.lineno
+                found[module.split(".")[-1]] = node.lineno
         elif isinstance(node, ast.ImportFrom):
             found[f"relative import {node.module}"] = node.lineno
         elif isinstance(node, ast.Import):
             parts = (a.name.split(".") for a in node.names)
-            found.update((p[1], node.lineno) for p in parts if p[0] == "scanclean" and len(p) > 1)
+            found.update((p[-1], node.lineno) for p in parts if p[0] == "scanclean" and len(p) > 1)
     return found
 
 
-def modules() -> list[str]:
-    return sorted(path.stem for path in PACKAGE.glob("*.py") if path.stem not in FACADE)
+def modules() -> dict[str, Path]:
+    paths = sorted(PACKAGE.rglob("*.py"), key=lambda path: path.stem)
+    return {path.stem: path for path in paths if path.stem not in FACADE}
 
 
 def test_the_order_lists_every_module_once():
-    assert sorted(ORDER) == modules()
+    assert sorted(ORDER) == list(modules())
 
 
 @pytest.mark.parametrize("name", modules())
 def test_a_module_imports_only_from_those_before_it(name):
     before = ORDER[: ORDER.index(name)]
     above = {
-        module: line
-        for module, line in imported(PACKAGE / f"{name}.py").items()
-        if module not in before
+        module: line for module, line in imported(modules()[name]).items() if module not in before
     }
     assert not above, f"{name} imports {above} (module: line), which do not stand before it"
 
@@ -69,12 +69,13 @@ def test_a_module_imports_only_from_those_before_it(name):
 def test_the_check_sees_imports_of_every_kind(tmp_path):
     source = tmp_path / "module.py"
     source.write_text(
-        "import scanclean.runs\n"
-        "from scanclean import labels, __version__\n"
-        "def f():\n    from scanclean.batch import Batch\n"
+        "import scanclean.sets.runs\n"
+        "from scanclean.sets import labels\n"
+        "from scanclean import clean, __version__\n"
+        "def f():\n    from scanclean.batches.batch import Batch\n"
         "from . import cli\n"
     )
-    assert set(imported(source)) == {"runs", "labels", "batch", "relative import None"}
+    assert set(imported(source)) == {"runs", "labels", "clean", "batch", "relative import None"}
 
 
 @pytest.mark.parametrize("arguments", [["--help"], ["clean", "--help"], ["--version"]])

@@ -8,8 +8,8 @@ from hypothesis import given
 from scipy import ndimage
 from skimage import data, measure
 
-from scanclean.labels import label
-from scanclean.runs import RunSet
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
 from tests.strategies import mask_pairs, masks
 
 of = RunSet.from_mask

@@ -7,7 +7,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 
 from scanclean.ledger import CLASSES, PALETTE, Ledger
-from scanclean.runs import RunSet
+from scanclean.sets.runs import RunSet
 
 of = RunSet.from_mask
 ARRAYS = hnp.arrays(

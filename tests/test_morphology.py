@@ -12,8 +12,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 from scipy import ndimage
 
-from scanclean.elements import Element, box, diamond, line
-from scanclean.morphology import (
+from scanclean.sets.elements import Element, box, diamond, line
+from scanclean.sets.morphology import (
     close_set,
     dilate,
     erode,
@@ -23,7 +23,7 @@ from scanclean.morphology import (
     open_set,
     reconstruct,
 )
-from scanclean.runs import RunSet, pad, translate
+from scanclean.sets.runs import RunSet, pad, translate
 from tests.strategies import MARGIN, centred, elements, mask_pairs, masks, on_plane
 
 of = RunSet.from_mask

@@ -11,8 +11,8 @@ import numpy as np
 import pytest
 from PIL import Image
 
-from scanclean import files, pageio
 from scanclean.errors import PageError
+from scanclean.scans import files, pageio
 from scanclean.units import Resolution
 from tests.pagefiles import (
     DPI_300,

@@ -10,9 +10,9 @@ import numpy as np
 import pytest
 from PIL import Image
 
-from scanclean import pageio
 from scanclean.errors import PageError
 from scanclean.ledger import PALETTE
+from scanclean.scans import pageio
 from scanclean.units import Resolution
 from tests.pagefiles import (
     DPI_300,

@@ -10,7 +10,7 @@ from collections import deque
 
 import pytest
 
-from scanclean.pool import Ready, run_jobs
+from scanclean.batches.pool import Ready, run_jobs
 from tests.works import Number
 
 

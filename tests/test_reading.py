@@ -7,11 +7,11 @@ from PIL import Image, ImageDraw, ImageFont
 from fixtures.drawn import draw
 from fixtures.sheet import new_sheet
 from scanclean.clean import clean_page
-from scanclean.pageio import Scan
 from scanclean.recipe import Recipe
+from scanclean.scans.pageio import Scan
 from scanclean.score import match_boxes
+from scanclean.text.words import number_words
 from scanclean.units import Resolution
-from scanclean.words import number_words
 from tests.figures import hulls
 from tests.reading import finished, read, set_text
 

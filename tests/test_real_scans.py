@@ -23,8 +23,8 @@ from skimage import data
 from sklearn.datasets import load_digits
 
 from scanclean.clean import CleanPage, clean_page
-from scanclean.pageio import Scan
 from scanclean.recipe import Recipe
+from scanclean.scans.pageio import Scan
 from scanclean.units import Resolution
 
 EIGHT = np.ones((3, 3), bool)

@@ -11,10 +11,10 @@ from scipy import ndimage
 from sklearn.datasets import load_digits
 
 from fixtures.drawn import draw_variant
-from scanclean.density import measure_tone
-from scanclean.ruling import RuleSettings, find_rules
-from scanclean.runs import RunSet, transpose
-from scanclean.threshold import ThresholdSettings, threshold
+from scanclean.ink.density import measure_tone
+from scanclean.ink.threshold import ThresholdSettings, threshold
+from scanclean.rules.ruling import RuleSettings, find_rules
+from scanclean.sets.runs import RunSet, transpose
 from scanclean.units import Length, Resolution
 from tests.ruled import INK_RATIO, Page, box, line, strip, strip_bitonal
 

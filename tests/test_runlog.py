@@ -10,8 +10,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from scanclean.batches.runlog import RUN_LOG, PageRecord, ResultFile, RunLog, recorded_results
 from scanclean.errors import OutputError
-from scanclean.runlog import RUN_LOG, PageRecord, ResultFile, RunLog, recorded_results
 
 
 def record(name: str, page: int = 1, **changes) -> PageRecord:

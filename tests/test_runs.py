@@ -8,7 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 
-from scanclean.runs import (
+from scanclean.sets.runs import (
     RunSet,
     complement,
     crop,

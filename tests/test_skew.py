@@ -7,8 +7,8 @@ import numpy as np
 import pytest
 from PIL import Image, ImageDraw, ImageFont
 
-from scanclean.runs import RunSet, transpose
-from scanclean.skew import MOST_SKEW, find_skew, straighten
+from scanclean.ink.skew import MOST_SKEW, find_skew, straighten
+from scanclean.sets.runs import RunSet, transpose
 from scanclean.units import Resolution
 
 A5_AT_300 = (2480, 1748)  # ISO 216: 210 x 148 mm, lying; from memory

@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from scanclean.smoothing import (
+from scanclean.rules.smoothing import (
     fit_lines,
     group_quantile,
     running_quantile,

@@ -9,8 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from scanclean.errors import CallError
-from scanclean.sources import (
+from scanclean.batches.sources import (
     Found,
     PageSelection,
     SourceFile,
@@ -18,6 +17,7 @@ from scanclean.sources import (
     find_scans,
     read_listing,
 )
+from scanclean.errors import CallError
 
 SUFFIXES = (".png", ".tif", ".tiff")
 

@@ -6,13 +6,13 @@ from scipy import ndimage
 
 from fixtures.drawn import draw
 from fixtures.sheet import new_sheet
-from scanclean.clutter import is_hair, is_lump
-from scanclean.labels import label
-from scanclean.runs import RunSet
-from scanclean.specks import SpeckSettings
-from scanclean.textmeasure import TextMeasures, measure_spread
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
+from scanclean.text.clutter import is_hair, is_lump
+from scanclean.text.specks import SpeckSettings
+from scanclean.text.textmeasure import TextMeasures, measure_spread
+from scanclean.text.upright import Frame, place
 from scanclean.units import Length
-from scanclean.upright import Frame, place
 from tests.reading import finished, read, set_text
 
 EIGHT = np.ones((3, 3), bool)

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from scipy import ndimage
 
-from scanclean.runs import RunSet
+from scanclean.sets.runs import RunSet
 from scanclean.steps import OPERATIONS, Step
 from scanclean.units import Length, Resolution
 

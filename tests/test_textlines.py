@@ -8,9 +8,11 @@ from skimage import data
 from skimage.filters import threshold_sauvola
 
 from fixtures.drawn import draw
-from scanclean.columns import Gaps, Occupied, corridors
-from scanclean.labels import label
-from scanclean.neighbours import (
+from scanclean.score import match_regions
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
+from scanclean.text.columns import Gaps, Occupied, corridors
+from scanclean.text.neighbours import (
     beside,
     best_of_both,
     chains,
@@ -18,9 +20,7 @@ from scanclean.neighbours import (
     keyed_neighbours,
     weighted_median,
 )
-from scanclean.runs import RunSet
-from scanclean.score import match_regions
-from scanclean.upright import Frame
+from scanclean.text.upright import Frame
 from tests.reading import read, set_text
 from tests.strategies import masks
 
@@ -253,9 +253,9 @@ def test_a_moved_page_has_the_same_lines_moved():
 
 
 def test_the_slices_of_a_word_are_made_of_its_runs():
-    from scanclean.baselines import cut_slices
-    from scanclean.textmeasure import measure_spread
-    from scanclean.upright import place
+    from scanclean.text.baselines import cut_slices
+    from scanclean.text.textmeasure import measure_spread
+    from scanclean.text.upright import place
 
     mask = bitmap(
         "##........##",

@@ -3,9 +3,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from scanclean.labels import label
-from scanclean.runs import RunSet
-from scanclean.textmeasure import estimate_dpi, measure_spread, measure_text
+from scanclean.sets.labels import label
+from scanclean.sets.runs import RunSet
+from scanclean.text.textmeasure import estimate_dpi, measure_spread, measure_text
 from scanclean.units import Resolution
 from tests.reading import set_text
 

@@ -10,8 +10,8 @@ from PIL import Image
 from scipy import ndimage
 from skimage import data, filters
 
-from scanclean.density import measure_tone
-from scanclean.threshold import METHODS, ThresholdSettings, darker, local_level, threshold
+from scanclean.ink.density import measure_tone
+from scanclean.ink.threshold import METHODS, ThresholdSettings, darker, local_level, threshold
 from scanclean.units import Length, Resolution
 from tests.benchmarks import bench_threshold
 from tests.greys import bars

@@ -14,12 +14,12 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from scanclean.batches.work import Done, PageTask
 from scanclean.errors import PageError
-from scanclean.files import write_whole
-from scanclean.pageio import read_page
-from scanclean.pagewrite import write_bitonal
+from scanclean.scans.files import write_whole
+from scanclean.scans.pageio import read_page
+from scanclean.scans.pagewrite import write_bitonal
 from scanclean.units import Resolution
-from scanclean.work import Done, PageTask
 
 
 @dataclass(frozen=True)

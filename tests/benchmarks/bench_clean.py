@@ -26,11 +26,11 @@ import numpy as np
 from PIL import Image
 
 from fixtures.drawn import draw
+from scanclean.batches.sources import SourceFile
+from scanclean.batches.work import CleanWork, PageTask
 from scanclean.ledger import PALETTE, Ledger
-from scanclean.pageio import read_ledger
 from scanclean.recipe import Recipe
-from scanclean.sources import SourceFile
-from scanclean.work import CleanWork, PageTask
+from scanclean.scans.pageio import read_ledger
 from tests.benchmarks import plain_scripts
 
 A4 = (210.0, 297.0)

@@ -27,9 +27,9 @@ from numpy.typing import NDArray
 from PIL import Image
 
 from fixtures.drawn import VARIANTS, available, draw, draw_variant
-from scanclean.density import measure_tone
+from scanclean.ink.density import measure_tone
+from scanclean.ink.threshold import METHODS, ThresholdSettings, is_clean, threshold
 from scanclean.score import contest_measures
-from scanclean.threshold import METHODS, ThresholdSettings, is_clean, threshold
 from scanclean.units import Length, Resolution
 
 Mask = NDArray[np.bool_]

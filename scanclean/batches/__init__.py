@@ -1,0 +1,1 @@
+"""Many pages: which, done by whom, recorded and resumed."""

@@ -1,0 +1,1 @@
+"""From pixels to ink: the paper measured, the threshold, what is shade, edge or pinhole."""

@@ -1,0 +1,1 @@
+"""Ruled lines: found, told from strokes, and taken off."""

@@ -1,0 +1,1 @@
+"""Binary pages as sets of points: runs, structuring elements, components, morphology."""
