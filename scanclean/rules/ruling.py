@@ -39,6 +39,7 @@ _LONG_MM = 60.0  # from here a rule need not run as the page's others do, nor be
 _REACH_MM, _SHORT_REACH_MM = 13.0, 3.0  # how far ends may run on
 _FAINTEST = 0.92  # of the paper: what is darker may be a rule, faded ones included
 _STEADY, _STEADY_SHORT = 0.15, 0.25  # roughness; letters in a row have 0.22 and more
+_FAINT, _DARK = 0.03, 2.6  # density of a rule; more is a sum of things
 _DASH_PITCH_MM = 3.0
 _SKEW_MARGIN = 0.5  # degrees: rules are not all parallel
 _MOST_NOISE = 0.06
@@ -52,8 +53,8 @@ _PER_RATIO = 0.434  # d log10(x) / dx at 1: noise of a ratio as noise of a densi
 _POINT_PX = 16  # between the points of a rule's centre
 _LEAST_INK = 0.05  # of a rule's centre
 
-# of a bitonal scan the share of ink along a line stands for density
-_COVER = (0.8 * (1 - np.arange(256) / 255)).astype(np.float32)
+# of a bitonal scan the share of ink along a line stands for tone
+_BLACK = float(DENSITY[0])
 _COVER_MM = 0.34  # over so much on both sides
 _HALF = 0.63  # of the scale: more than a third of the pixels are ink
 
@@ -93,7 +94,7 @@ class Rule:
     thickness_px : float
         Of an even line of the same darkness along its middle and the same ink in all.
     density : float
-        Usual optical density along the middle; 1 of a line found by its shape.
+        Usual optical density along the middle; on a bitonal page that of black.
     evidence : {"density", "shape"}
         What told the rule from the strokes on it.
     centre : (P, 2) float array
@@ -206,7 +207,7 @@ def _place(rule: Rule) -> tuple[str, float, tuple[int, int, int, int]]:
 
 def _record_of(rule: DashedRule) -> Rule:
     direction = "vertical" if rule.vertical else "horizontal"
-    return Rule(direction, rule.box, rule.thickness_px, 1.0, "shape", rule.centre, rule.dash)
+    return Rule(direction, rule.box, rule.thickness_px, _BLACK, "shape", rule.centre, rule.dash)
 
 
 def _records(part: RuledLines, by_shape: Bools, ink: RunSet) -> Iterator[Rule]:
@@ -257,7 +258,6 @@ class _Side:
         settings: RuleSettings,
     ) -> None:
         self.page, self.vertical = page, vertical
-        self.table = _COVER if noise is None else DENSITY
         turned = resolution.transposed if vertical else resolution
         self.mm, self.mm_across = turned.x_mm, turned.y_mm
         self.dashed = settings.dashed
@@ -349,7 +349,7 @@ class _Side:
         if self.dashed:
             # the step of a typewriter's hyphens is shorter
             is_rule |= (lines.pitch >= _DASH_PITCH_MM * self.mm) & (isolated >= 0.12)
-        is_rule &= lines.peak >= 0.03
+        is_rule &= (lines.peak >= _FAINT) & (lines.peak <= _DARK)
         is_rule &= lines.thickness <= 1.15 * self.max_thickness
         is_rule &= bend / self.mm_across <= np.minimum(0.16, 0.02 + 0.0012 * length)
         # arcs and letters that touch by chance have their pieces beside the line through them
@@ -364,7 +364,7 @@ class _Side:
         straight = (bend / self.mm_across < 0.042) & (
             np.abs(slope - lines.tracks.page_slope) < 0.03
         )
-        return straight & (lines.isolated >= 0.3) & (lines.peak >= 0.03)
+        return straight & (lines.isolated >= 0.3) & (lines.peak >= _FAINT)
 
     def ruled(self) -> list[RuledLines]:
         """The rules found, with their columns."""
