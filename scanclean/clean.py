@@ -20,7 +20,7 @@ from scanclean.recipe import Recipe
 from scanclean.rules.ruling import Rule, find_rules
 from scanclean.scans.pageio import Scan
 from scanclean.sets.labels import Components, label
-from scanclean.sets.runs import RunSet, complement, crop
+from scanclean.sets.runs import RunSet, complement, crop, difference, union
 from scanclean.steps import Step
 from scanclean.text.glyphs import join_parts
 from scanclean.text.reading import Glyphs, TextLines, put_in_order
@@ -130,7 +130,7 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
     if scan.dpi is None:
         resolution = _estimated(start.ink - start.shade, resolution)
 
-    books = _Books(start.ink, start.ink)
+    books = _Books.opened(start.ink)
     add_steps = partial(_add_steps, books, recipe.steps, resolution)
     books.take("shade", start.shade)
     add_steps("threshold")
@@ -259,26 +259,39 @@ class _Books:
 
     thresholded: RunSet
     ink: RunSet
+    mended: RunSet
     claims: dict[str, RunSet] = field(default_factory=dict)
+
+    @classmethod
+    def opened(cls, thresholded: RunSet) -> _Books:
+        """Books of a page of which nothing was taken yet."""
+        return cls(thresholded, thresholded, RunSet.empty(thresholded.shape))
 
     def take(self, claim: str, found: RunSet) -> None:
         """Take out what is found, for a reason."""
         taken = found & self.ink
         if taken:
             earlier = self.claims.get(claim, RunSet.empty(taken.shape))
-            self.claims[claim] = earlier | (taken & self.thresholded)
+            self.claims[claim] = earlier | (taken - self.mended)
+            self.mended = self.mended - taken
             self.ink = self.ink - taken
 
     def mend(self, found: RunSet) -> None:
         """Put in what is missing."""
         if found:
+            # what is neither ink nor was taken out was paper
+            self.mended = self.mended | difference(found - self.ink, self._taken)
             self.claims = {claim: taken - found for claim, taken in self.claims.items()}
             self.ink = self.ink | found
+
+    @property
+    def _taken(self) -> RunSet:
+        return union(RunSet.empty(self.ink.shape), *self.claims.values())
 
     def closed(self) -> Ledger:
         """The ledger of all that was booked."""
         claims = {claim: taken for claim, taken in self.claims.items() if taken}
-        return Ledger(self.thresholded, claims, self.ink - self.thresholded)
+        return Ledger(self.thresholded, claims, self.mended)
 
 
 def _add_steps(books: _Books, steps: tuple[Step, ...], resolution: Resolution, after: str) -> None:
