@@ -170,7 +170,7 @@ def clean_page(scan: Scan, recipe: Recipe, *, straighten: bool = False) -> Clean
         dpi_estimated=scan.dpi is None,
         skew_degrees=skew,
         to_source=to_source[:2],
-        measures=_measures(ledger, text, start, int(speck.sum()), resolution),
+        measures=_measures(ledger, text, start, int(speck.sum())),
         flags=_flags(scan, start, text, int(speck.sum()), resolution),
         components=text.components,
         glyphs=glyphs,
@@ -331,9 +331,7 @@ class _Text:
 # ---- what is told about the page
 
 
-def _measures(
-    ledger: Ledger, text: _Text, start: _Start, n_specks: int, resolution: Resolution
-) -> dict[str, float | None]:
+def _measures(ledger: Ledger, text: _Text, start: _Start, n_specks: int) -> dict[str, float | None]:
     height, width = ledger.thresholded.shape
     has_text = text.measures.x_height_px > 0
     return {
